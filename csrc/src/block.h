@@ -1,0 +1,154 @@
+/* Template (see real.h).  A block of LANES symbols on its way from the call's
+ * arrays to LLRs: load() brings every symbol to the same form, a kernel turns
+ * that into LLRs bit by bit, store() writes them in the wanted type. */
+
+struct F(block) {
+    real v[2][LANES];           /* y / h in the plan's units, I and Q */
+    real scale[LANES];          /* |h|^2 / N0 in the plan's units; 0: no information */
+    real poison[LANES];         /* 0, or NaN where y, h or a prior is not usable */
+    real prior[PDM_MAX_BITS][LANES];    /* positive means 0; set where has_prior */
+    real llr[PDM_MAX_BITS][LANES];      /* positive means 0 */
+    uint32_t label[LANES];      /* slicing: the nearest point */
+    int has_prior;
+};
+
+/* Values far beyond any point are held to a quarter of the type's range, so
+ * that sums of coordinates stay finite. */
+static inline real F(hold)(double x)
+{
+    const double limit = (double)LARGEST / 4;
+    return (real)(x < -limit ? -limit : x > limit ? limit : x);
+}
+
+/* y / h and |h|^2 / N0, in double whatever the type: for float32 the result
+ * is then rounded once, and for float64 h is brought near 1 by a power of two
+ * first, so that |h|^2 neither overflows nor loses digits. */
+static inline void F(equalise)(struct F(block) *b, int i, const real *y, const real *h, double noise,
+                               double unit)
+{
+    const double yr = (double)y[0] * 0.25, yi = (double)y[1] * 0.25;
+    double hr = (double)h[0], hi = (double)h[1];
+    const double size_r = hr < 0 ? -hr : hr, size_i = hi < 0 ? -hi : hi;
+    const double size = size_r > size_i ? size_r : size_i;
+    const union double_bits size_bits = {.r = size};
+    int e = (int)(size_bits.w >> 52 & 2047) - 1023;
+    e = e < -1000 ? -1000 : e > 1000 ? 1000 : e;
+    const double down = power_of_two(-e), up = power_of_two(e);
+    hr *= down;
+    hi *= down;
+    const double power = hr * hr + hi * hi;
+    const int silent = !(power > 0);    /* h = 0, or NaN */
+    const double back = 4 * down * unit, divisor = silent ? 1 : power;
+    const double scale = divisor * up / (noise * (unit * unit)) * up;
+    const real poison = (real)((yr - yr) + (yi - yi) + (hr - hr) + (hi - hi));
+    const int usable = !silent && poison == 0;
+    b->v[0][i] = usable ? F(hold)((yr * hr + yi * hi) / divisor * back) : 0;
+    b->v[1][i] = usable ? F(hold)((yi * hr - yr * hi) / divisor * back) : 0;
+    b->scale[i] = usable ? F(hold)(scale) : 0;
+    b->poison[i] = poison;
+}
+
+static void F(load)(const struct pdm_call *call, size_t first, int count, struct F(block) *b)
+{
+    const struct pdm_plan *plan = call->plan;
+    const real *y = (const real *)call->y + 2 * first;
+    const real *noise = call->noise ? (const real *)call->noise + first * call->noise_stride : 0;
+    const double unit = plan->unit;
+
+    if (call->gain) {
+        const real *gain = (const real *)call->gain + 2 * first * call->gain_stride;
+        for (int i = 0; i < count; i++)
+            F(equalise)(b, i, y + 2 * i, gain + 2 * (size_t)i * call->gain_stride,
+                        noise ? (double)noise[(size_t)i * call->noise_stride] : 1, unit);
+    } else {
+        const real u = (real)unit;
+        for (int i = 0; i < count; i++) {
+            const real yr = y[2 * i], yi = y[2 * i + 1];
+            const real poison = (yr - yr) + (yi - yi);
+            b->v[0][i] = poison == 0 ? F(hold)((double)(yr * u)) : 0;
+            b->v[1][i] = poison == 0 ? F(hold)((double)(yi * u)) : 0;
+            b->poison[i] = poison;
+        }
+        if (noise && call->noise_stride) {
+            for (int i = 0; i < count; i++)
+                b->scale[i] = F(hold)(1 / ((double)noise[i] * unit * unit));
+        } else {
+            const real scale = F(hold)(1 / ((noise ? (double)*noise : 1) * unit * unit));
+            EACH_LANE b->scale[i] = scale;
+        }
+    }
+    for (int i = count; i < LANES; i++)
+        b->v[0][i] = b->v[1][i] = b->scale[i] = b->poison[i] = 0;
+
+    b->has_prior = call->prior != 0;
+    if (call->prior) {
+        const int n = plan->bits;
+        const real *prior = (const real *)call->prior + (size_t)n * first;
+        const real sign = call->settings.positive_bit ? -R(1.) : R(1.);
+        for (int k = 0; k < n; k++) {
+            for (int i = 0; i < count; i++) {
+                const real p = prior[(size_t)i * (size_t)n + (size_t)k] * sign;
+                b->poison[i] = p == p ? b->poison[i] : p;
+                b->prior[k][i] = p == p ? F(most)(-PRIOR_LIMIT, F(least)(p, PRIOR_LIMIT)) : 0;
+            }
+            for (int i = count; i < LANES; i++)
+                b->prior[k][i] = 0;
+        }
+    }
+    for (int k = 0; k < plan->bits; k++)
+        EACH_LANE b->prior[k][i] = call->prior ? b->prior[k][i] : 0;
+}
+
+/* The LLR of bit k as it leaves, whatever the output type. */
+static inline real F(finish)(const struct pdm_settings *settings, const struct F(block) *b, int k,
+                             int i)
+{
+    real l = b->llr[k][i];
+    if (b->has_prior) {
+        l = b->scale[i] > 0 ? l : b->prior[k][i];
+        l = settings->extrinsic ? l - b->prior[k][i] : l;
+    }
+    l = F(most)(F(least)(l, LARGEST), -LARGEST);
+    return (settings->positive_bit ? -l : l) + b->poison[i];
+}
+
+/* A word: rounded half to even by adding and taking off MAGIC, once the value
+ * is within the word's limits; NaN becomes 0. */
+static inline int F(to_counts)(real llr, real step, real limit)
+{
+    const real x = F(most)(F(least)(llr / step, limit), -limit);
+    return llr == llr ? (int)((x + MAGIC) - MAGIC) : 0;
+}
+
+static void F(store)(const struct pdm_call *call, size_t first, int count, const struct F(block) *b)
+{
+    const size_t n = call->plan->bits, start = n * first;
+    const pdm_settings *s = &call->settings;
+    const real step = (real)s->word_step;
+    const real limit = (real)((1 << (s->word_bits - 1)) - 1);
+
+    switch (call->output) {
+    case PDM_OUT_LABEL:
+        for (int i = 0; i < count; i++)
+            ((uint16_t *)call->out)[first + (size_t)i] =
+                (uint16_t)(b->scale[i] > 0 && b->poison[i] == 0 ? b->label[i] : 0);
+        break;
+    case PDM_OUT_REAL:
+        for (int i = 0; i < count; i++)
+            for (size_t k = 0; k < n; k++)
+                ((real *)call->out)[start + (size_t)i * n + k] = F(finish)(s, b, (int)k, i);
+        break;
+    case PDM_OUT_I8:
+        for (int i = 0; i < count; i++)
+            for (size_t k = 0; k < n; k++)
+                ((int8_t *)call->out)[start + (size_t)i * n + k] =
+                    (int8_t)F(to_counts)(F(finish)(s, b, (int)k, i), step, limit);
+        break;
+    case PDM_OUT_I16:
+        for (int i = 0; i < count; i++)
+            for (size_t k = 0; k < n; k++)
+                ((int16_t *)call->out)[start + (size_t)i * n + k] =
+                    (int16_t)F(to_counts)(F(finish)(s, b, (int)k, i), step, limit);
+        break;
+    }
+}

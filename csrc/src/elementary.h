@@ -1,0 +1,89 @@
+/* Template (see real.h).  exp and log of the core's own: IEEE-754 basic
+ * operations only, no table, no branch, so that a loop over lanes vectorises
+ * and every machine gives the same bits.  Constants and the errors they leave
+ * come from constants.py; the bounds in the comments are held by tests. */
+
+union F(bits) { real r; word w; };
+
+static inline real F(from_word)(word w)
+{
+    const union F(bits) b = {.w = w};
+    return b.r;
+}
+
+static inline word F(to_word)(real r)
+{
+    const union F(bits) b = {.r = r};
+    return b.w;
+}
+
+static inline real F(magnitude)(real x)
+{
+    return F(from_word)(F(to_word)(x) & ~((word)1 << (REAL_BITS - 1)));
+}
+
+static inline real F(least)(real a, real b) { return a < b ? a : b; }
+
+static inline real F(most)(real a, real b) { return a > b ? a : b; }
+
+/* exp(-t) for t >= -1, relative error below (1.5 + t) u; 0 where the result
+ * would come near the subnormal numbers.  2^-x with x = t log2(e) is split at
+ * the nearest whole number; its fraction's power is a polynomial. */
+static inline real F(exp_minus)(real t)
+{
+#if REAL_BITS == 32
+    const real log2e = 1.442695022f, c0 = 0.6931471825f, c1 = 0.2402265072f, c2 = 0.05550356954f,
+               c3 = 0.009618083015f, c4 = 0.001339086331f, c5 = 0.0001545316336f;
+#else
+    const real log2e = 1.44269504088896339, c0 = 0.693147180559945286, c1 = 0.240226506959100972,
+               c2 = 0.055504108664821597, c3 = 0.00961812910760688825, c4 = 0.00133335581464169356,
+               c5 = 0.000154035304417360499, c6 = 0.0000152527338298361192,
+               c7 = 1.32154425879216893e-6, c8 = 1.01780624458457737e-7,
+               c9 = 7.07258594926922339e-9, c10 = 4.45496059818651856e-10;
+#endif
+    const real x = F(least)(t * log2e, (real)ZERO_WEIGHT);
+    const real shifted = x + MAGIC, f = (shifted - MAGIC) - x;
+#if REAL_BITS == 32
+    const real p = c0 + f * (c1 + f * (c2 + f * (c3 + f * (c4 + f * c5))));
+#else
+    const real high = c6 + f * (c7 + f * (c8 + f * (c9 + f * c10)));
+    const real p = c0 + f * (c1 + f * (c2 + f * (c3 + f * (c4 + f * (c5 + f * high)))));
+#endif
+    const word scale = (MAGIC_WORD + EXPONENT_ONE - F(to_word)(shifted)) << FRACTION_BITS;
+    const real power = F(from_word)(scale) + F(from_word)(scale) * (f * p);
+    return x < (real)ZERO_WEIGHT ? power : 0;
+}
+
+/* ln(a / b) for normal a, b > 0: absolute error below 2.5 u (1 + |result|),
+ * and relative to the result where a / b is within [1/sqrt 2, sqrt 2].
+ * The exponents are taken off first, so that a / b may be beyond the type's
+ * range; ln of what remains is 2 atanh((a - b) / (a + b)), where a - b has no
+ * rounding error: near a = b a quotient less 1 would lose all digits. */
+static inline real F(log_ratio)(real a, real b)
+{
+#if REAL_BITS == 32
+    const real ln2_high = 0.6931152344f, ln2_low = 3.19461833e-5f, c0 = 0.6666668653f,
+               c1 = 0.3998878002f, c2 = 0.2957994938f;
+#else
+    const real ln2_high = 0.693147180560117704, ln2_low = -1.72394445256148348e-13,
+               c0 = 0.666666666666666963, c1 = 0.399999999998995048, c2 = 0.285714286259754868,
+               c3 = 0.222222111347950807, c4 = 0.181828891252617225, c5 = 0.153317216005560419,
+               c6 = 0.146164496850434061;
+#endif
+    const real sqrt2 = R(1.41421356237309505);
+    const word fraction = ((word)1 << FRACTION_BITS) - 1, one = (word)EXPONENT_ONE << FRACTION_BITS;
+    const word wa = F(to_word)(a), wb = F(to_word)(b);
+    real ma = F(from_word)((wa & fraction) | one), mb = F(from_word)((wb & fraction) | one);
+    real e = F(from_word)(MAGIC_WORD + (wa >> FRACTION_BITS) - (wb >> FRACTION_BITS)) - MAGIC;
+    const real up = ma > mb * sqrt2 ? R(1.) : R(0.), down = mb > ma * sqrt2 ? R(1.) : R(0.);
+    e = e + (up - down);
+    ma = ma - R(0.5) * up * ma;
+    mb = mb - R(0.5) * down * mb;
+    const real z = (ma - mb) / (ma + mb), w = z * z;
+#if REAL_BITS == 32
+    const real p = c0 + w * (c1 + w * c2);
+#else
+    const real p = c0 + w * (c1 + w * (c2 + w * (c3 + w * (c4 + w * (c5 + w * c6)))));
+#endif
+    return e * ln2_high + (e * ln2_low + (z + z) + z * (w * p));
+}

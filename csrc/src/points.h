@@ -1,0 +1,225 @@
+/* Template (see real.h).  Points kernels: any labelled points, by the
+ * definition; exact and max-log.
+ *
+ * Metrics are relative to the nearest point s, as on a grid: with w half the
+ * way from s to the point and e from s to the sample, a point costs
+ * 4 w.(e + w) / N0.  They are formed in double for both types: points need not
+ * lie on round numbers, and the difference of two of them has to keep its
+ * digits.  Labels are taken in chunks, whose low bits are summed by halving as
+ * on an axis of a box. */
+
+enum { F(CHUNK_BITS) = 6 };
+
+struct F(cloud) {
+    const struct pdm_plan *plan;
+    const struct F(block) *block;
+    double sx[LANES], sy[LANES], ex[LANES], ey[LANES], scale[LANES];
+    int low_bits, chunks;
+    real low_cost[1 << F(CHUNK_BITS)][LANES];   /* priors of the low bits, by slot */
+};
+
+static inline double F(product)(double wx, double wy, double ex, double ey)
+{
+    return wx * (ex + wx) + wy * (ey + wy);
+}
+
+/* The nearest point of each lane, found relative to the point of label 0. */
+static void F(points_nearest)(const struct pdm_plan *plan, const struct F(block) *b,
+                              uint32_t nearest[LANES])
+{
+    const double *x = pdm_points(plan), *y = x + plan->order;
+    double ex[LANES], ey[LANES], best[LANES];
+    EACH_LANE
+    {
+        ex[i] = (double)b->v[0][i] - x[0];
+        ey[i] = (double)b->v[1][i] - y[0];
+        best[i] = 0;
+        nearest[i] = 0;
+    }
+    for (uint32_t j = 1; j < plan->order; j++) {
+        const double wx = (x[0] - x[j]) * 0.5, wy = (y[0] - y[j]) * 0.5;
+        EACH_LANE
+        {
+            const double m = F(product)(wx, wy, ex[i], ey[i]);
+            nearest[i] = m < best[i] ? j : nearest[i];
+            best[i] = m < best[i] ? m : best[i];
+        }
+    }
+}
+
+static inline real F(prior_cost)(real prior, int value)
+{
+    return F(most)(value ? prior : -prior, 0);
+}
+
+static void F(prepare_cloud)(const struct pdm_plan *plan, const struct F(block) *b,
+                             struct F(cloud) *c)
+{
+    const double *x = pdm_points(plan), *y = x + plan->order;
+    uint32_t nearest[LANES];
+    F(points_nearest)(plan, b, nearest);
+    c->plan = plan;
+    c->block = b;
+    EACH_LANE
+    {
+        c->sx[i] = x[nearest[i]];
+        c->sy[i] = y[nearest[i]];
+        c->ex[i] = (double)b->v[0][i] - c->sx[i];
+        c->ey[i] = (double)b->v[1][i] - c->sy[i];
+        c->scale[i] = (double)b->scale[i];
+    }
+    c->low_bits = plan->bits < F(CHUNK_BITS) ? plan->bits : F(CHUNK_BITS);
+    c->chunks = 1 << (plan->bits - c->low_bits);
+    if (b->has_prior)
+        for (int s = 0; s < 1 << c->low_bits; s++) {
+            EACH_LANE c->low_cost[s][i] = 0;
+            for (int p = 0; p < c->low_bits; p++)
+                EACH_LANE c->low_cost[s][i] +=
+                    F(prior_cost)(b->prior[plan->bits - 1 - p][i], s >> p & 1);
+        }
+}
+
+/* Value of label bit k in all labels of a chunk (k among the high bits). */
+static inline int F(chunk_bit)(const struct F(cloud) *c, int chunk, int k)
+{
+    return chunk >> (c->plan->bits - c->low_bits - 1 - k) & 1;
+}
+
+/* Metrics of the labels of a chunk, priors added. */
+static void F(chunk_metrics)(const struct F(cloud) *c, int chunk, real slot[PDM_MAX_LEVELS][LANES])
+{
+    const int count = 1 << c->low_bits;
+    const double *x = pdm_points(c->plan) + (size_t)chunk * (size_t)count, *y = x + c->plan->order;
+    for (int s = 0; s < count; s++)
+        EACH_LANE
+        {
+            const double wx = (c->sx[i] - x[s]) * 0.5, wy = (c->sy[i] - y[s]) * 0.5;
+            const double m = 4 * (c->scale[i] * F(product)(wx, wy, c->ex[i], c->ey[i]));
+            slot[s][i] = (real)(m < (double)LARGEST ? m : (double)LARGEST);
+        }
+    if (c->block->has_prior) {
+        real cost[LANES];
+        EACH_LANE cost[i] = 0;
+        for (int k = 0; k < c->plan->bits - c->low_bits; k++)
+            EACH_LANE cost[i] +=
+                F(prior_cost)(c->block->prior[k][i], F(chunk_bit)(c, chunk, k));
+        for (int s = 0; s < count; s++)
+            EACH_LANE slot[s][i] =
+                F(least)(slot[s][i] + (cost[i] + c->low_cost[s][i]), LARGEST);
+    }
+}
+
+/* The least metric of each bit value. */
+static void F(points_least)(const struct F(cloud) *c, real best[PDM_MAX_BITS][2][LANES])
+{
+    real slot[PDM_MAX_LEVELS][LANES], half[PDM_MAX_PATTERNS][2][LANES];
+    const int high = c->plan->bits - c->low_bits;
+    for (int k = 0; k < c->plan->bits; k++)
+        EACH_LANE best[k][0][i] = best[k][1][i] = LARGEST;
+    for (int chunk = 0; chunk < c->chunks; chunk++) {
+        F(chunk_metrics)(c, chunk, slot);
+        F(halve_least)(c->low_bits, slot, half);
+        for (int k = 0; k < c->plan->bits; k++)
+            for (int value = 0; value < 2; value++) {
+                const real *h = k >= high ? half[k - high][value] : slot[0];
+                if (k >= high || F(chunk_bit)(c, chunk, k) == value)
+                    EACH_LANE best[k][value][i] = F(least)(best[k][value][i], h[i]);
+            }
+    }
+}
+
+static void F(points_max_log)(const struct pdm_plan *plan, struct F(block) *b)
+{
+    struct F(cloud) c;
+    real best[PDM_MAX_BITS][2][LANES];
+    F(prepare_cloud)(plan, b, &c);
+    F(points_least)(&c, best);
+    for (int k = 0; k < plan->bits; k++)
+        EACH_LANE b->llr[k][i] = best[k][1][i] - best[k][0][i];
+}
+
+/* The sums of all bits in question relative to the nearest point with that bit
+ * value, for blocks in which a sum relative to the nearest point of all has
+ * lost terms to underflow. */
+static void F(points_far)(const struct F(cloud) *c, const uint8_t far[PDM_MAX_BITS],
+                          struct F(block) *b)
+{
+    const int n = c->plan->bits, count = 1 << c->low_bits;
+    real slot[PDM_MAX_LEVELS][LANES], best[PDM_MAX_BITS][2][LANES], sum[PDM_MAX_BITS][2][LANES];
+    F(points_least)(c, best);
+    for (int k = 0; k < n; k++)
+        EACH_LANE sum[k][0][i] = sum[k][1][i] = 0;
+    for (int chunk = 0; chunk < c->chunks; chunk++) {
+        F(chunk_metrics)(c, chunk, slot);
+        for (int s = 0; s < count; s++)
+            for (int k = 0; k < n; k++) {
+                if (!far[k])
+                    continue;
+                const int value = (chunk * count + s) >> (n - 1 - k) & 1;
+                real way[LANES];
+                int any = 0;
+                EACH_LANE way[i] = slot[s][i] - best[k][value][i];
+                EACH_LANE any |= way[i] < NEGLIGIBLE;
+                if (any)
+                    EACH_LANE sum[k][value][i] += way[i] < NEGLIGIBLE ? F(exp_minus)(way[i]) : 0;
+            }
+    }
+    for (int k = 0; k < n; k++)
+        if (far[k])
+            EACH_LANE
+            {
+                const real l = (best[k][1][i] - best[k][0][i]) +
+                               F(log_ratio)(sum[k][0][i], sum[k][1][i]);
+                b->llr[k][i] = F(magnitude)(b->llr[k][i]) > LARGEST_RATIO ? l : b->llr[k][i];
+            }
+}
+
+static void F(points_exact)(const struct pdm_plan *plan, struct F(block) *b)
+{
+    struct F(cloud) c;
+    real slot[PDM_MAX_LEVELS][LANES], half[PDM_MAX_PATTERNS][2][LANES], least[LANES];
+    real sum[PDM_MAX_BITS][2][LANES], lost[PDM_MAX_BITS][2][LANES];
+    uint8_t far[PDM_MAX_BITS];
+    F(prepare_cloud)(plan, b, &c);
+    const int high = plan->bits - c.low_bits;
+
+    EACH_LANE least[i] = 0;
+    if (b->has_prior) {
+        F(points_least)(&c, sum);
+        EACH_LANE least[i] = F(least)(sum[0][0][i], sum[0][1][i]);
+    }
+    for (int k = 0; k < plan->bits; k++)
+        EACH_LANE sum[k][0][i] = sum[k][1][i] = lost[k][0][i] = lost[k][1][i] = 0;
+    for (int chunk = 0; chunk < c.chunks; chunk++) {
+        F(chunk_metrics)(&c, chunk, slot);
+        for (int s = 0; s < 1 << c.low_bits; s++)
+            EACH_LANE slot[s][i] = F(exp_minus)(slot[s][i] - least[i]);
+        F(halve_sum)(c.low_bits, slot, half);
+        for (int k = 0; k < plan->bits; k++)
+            for (int value = 0; value < 2; value++) {
+                const real *h = k >= high ? half[k - high][value] : slot[0];
+                if (k < high && F(chunk_bit)(&c, chunk, k) != value)
+                    continue;
+                /* Kahan's compensated sum over up to 1024 chunks: one after
+                 * another they would add up rounding errors */
+                EACH_LANE
+                {
+                    const real term = h[i] - lost[k][value][i], s = sum[k][value][i] + term;
+                    lost[k][value][i] = (s - sum[k][value][i]) - term;
+                    sum[k][value][i] = s;
+                }
+            }
+    }
+    int any = 0;
+    for (int k = 0; k < plan->bits; k++) {
+        far[k] = 0;
+        EACH_LANE
+        {
+            b->llr[k][i] = F(log_ratio)(F(most)(sum[k][0][i], SMALLEST), F(most)(sum[k][1][i], SMALLEST));
+            far[k] |= F(magnitude)(b->llr[k][i]) > LARGEST_RATIO;
+        }
+        any |= far[k];
+    }
+    if (any)
+        F(points_far)(&c, far, b);
+}
