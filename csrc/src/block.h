@@ -4,7 +4,7 @@
 
 struct F(block) {
     real v[2][LANES];           /* y / h in the plan's units, I and Q */
-    real scale[LANES];          /* |h|^2 / N0 in the plan's units; 0: no information */
+    double noise[LANES];        /* N0 / |h|^2 in the plan's units; infinite: no information */
     real poison[LANES];         /* 0, or NaN where y, h or a prior is not usable */
     real prior[PDM_MAX_BITS][LANES];    /* positive means 0; set where has_prior */
     real llr[PDM_MAX_BITS][LANES];      /* positive means 0 */
@@ -12,16 +12,22 @@ struct F(block) {
     int has_prior;
 };
 
-/* Values far beyond any point are held to a quarter of the type's range, so
- * that sums of coordinates stay finite. */
+/* Samples far beyond any point are held there, so that what the kernels form
+ * from coordinates alone stays finite. */
 static inline real F(hold)(double x)
 {
-    const double limit = (double)LARGEST / 4;
-    return (real)(x < -limit ? -limit : x > limit ? limit : x);
+    return (real)(x < -FARTHEST ? -FARTHEST : x > FARTHEST ? FARTHEST : x);
 }
 
-/* y / h and |h|^2 / N0, in double whatever the type: for float32 the result
- * is then rounded once, and for float64 h is brought near 1 by a power of two
+/* x / noise, for x > 0: finite, and 0 where there is no information. */
+static inline real F(over_noise)(double x, double noise)
+{
+    const double q = x / noise;
+    return (real)(q < (double)LARGEST / 4 ? q : (double)LARGEST / 4);
+}
+
+/* y / h and N0 / |h|^2, in double whatever the type: for float32 the result is
+ * then rounded once, and for float64 h is brought near 1 by a power of two
  * first, so that |h|^2 neither overflows nor loses digits. */
 static inline void F(equalise)(struct F(block) *b, int i, const real *y, const real *h, double noise,
                                double unit)
@@ -33,18 +39,17 @@ static inline void F(equalise)(struct F(block) *b, int i, const real *y, const r
     const union double_bits size_bits = {.r = size};
     int e = (int)(size_bits.w >> 52 & 2047) - 1023;
     e = e < -1000 ? -1000 : e > 1000 ? 1000 : e;
-    const double down = power_of_two(-e), up = power_of_two(e);
+    const double down = power_of_two(-e);
     hr *= down;
     hi *= down;
     const double power = hr * hr + hi * hi;
     const int silent = !(power > 0);    /* h = 0, or NaN */
     const double back = 4 * down * unit, divisor = silent ? 1 : power;
-    const double scale = divisor * up / (noise * (unit * unit)) * up;
     const real poison = (real)((yr - yr) + (yi - yi) + (hr - hr) + (hi - hi));
     const int usable = !silent && poison == 0;
     b->v[0][i] = usable ? F(hold)((yr * hr + yi * hi) / divisor * back) : 0;
     b->v[1][i] = usable ? F(hold)((yi * hr - yr * hi) / divisor * back) : 0;
-    b->scale[i] = usable ? F(hold)(scale) : 0;
+    b->noise[i] = usable ? noise * (unit * unit) * down / divisor * down : NO_INFORMATION;
     b->poison[i] = poison;
 }
 
@@ -69,16 +74,16 @@ static void F(load)(const struct pdm_call *call, size_t first, int count, struct
             b->v[1][i] = poison == 0 ? F(hold)((double)(yi * u)) : 0;
             b->poison[i] = poison;
         }
-        if (noise && call->noise_stride) {
-            for (int i = 0; i < count; i++)
-                b->scale[i] = F(hold)(1 / ((double)noise[i] * unit * unit));
-        } else {
-            const real scale = F(hold)(1 / ((noise ? (double)*noise : 1) * unit * unit));
-            EACH_LANE b->scale[i] = scale;
-        }
+        const double square = unit * unit;
+        for (int i = 0; i < count; i++)
+            b->noise[i] = b->poison[i] == 0
+                              ? (noise ? (double)noise[(size_t)i * call->noise_stride] : 1) * square
+                              : NO_INFORMATION;
     }
-    for (int i = count; i < LANES; i++)
-        b->v[0][i] = b->v[1][i] = b->scale[i] = b->poison[i] = 0;
+    for (int i = count; i < LANES; i++) {
+        b->v[0][i] = b->v[1][i] = b->poison[i] = 0;
+        b->noise[i] = NO_INFORMATION;
+    }
 
     b->has_prior = call->prior != 0;
     if (call->prior) {
@@ -105,7 +110,7 @@ static inline real F(finish)(const struct pdm_settings *settings, const struct F
 {
     real l = b->llr[k][i];
     if (b->has_prior) {
-        l = b->scale[i] > 0 ? l : b->prior[k][i];
+        l = b->noise[i] < NO_INFORMATION ? l : b->prior[k][i];
         l = settings->extrinsic ? l - b->prior[k][i] : l;
     }
     l = F(most)(F(least)(l, LARGEST), -LARGEST);
@@ -131,7 +136,7 @@ static void F(store)(const struct pdm_call *call, size_t first, int count, const
     case PDM_OUT_LABEL:
         for (int i = 0; i < count; i++)
             ((uint16_t *)call->out)[first + (size_t)i] =
-                (uint16_t)(b->scale[i] > 0 && b->poison[i] == 0 ? b->label[i] : 0);
+                (uint16_t)(b->noise[i] < NO_INFORMATION ? b->label[i] : 0);
         break;
     case PDM_OUT_REAL:
         for (int i = 0; i < count; i++)

@@ -9,37 +9,120 @@
  * slot, and adds in pairs, which keeps rounding errors small.  Max-log is the
  * same with (minimum, +) for (+, x).
  *
- * Metrics are -ln of the weights, relative to the level nearest to the sample:
- * level i spacings away from it costs 4 (w / N0) (e + w), with w = i a and e
- * the way from the nearest level to the sample.  The difference of two squared
- * distances would lose its digits. */
+ * Metrics are -ln of the weights, relative to the point nearest to the sample:
+ * a level i spacings from that point's, which the sample misses by e spacings
+ * of a, costs 4 a^2 / N0 i (i + e).  The difference of two squared distances
+ * would lose its digits. */
 
-/* Metrics of all levels of the axis.  The half-spacing is taken in two parts,
- * of which the first has so few digits that its multiples are exact: the way e
- * from a level to the sample then has no rounding error of the level's size. */
+/* Number of the level nearest to the sample on each axis of the whole grid. */
+static inline void F(grid_nearest)(const struct pdm_plan *plan, const struct F(block) *b,
+                                   real number[2][LANES])
+{
+    for (int axis = 0; axis < 2; axis++) {
+        const real centre = (real)plan->centre[axis], last = (real)(plan->levels[axis] - 1);
+        const real per_spacing = (real)(0.5 / plan->half_spacing[axis]);
+        EACH_LANE
+        {
+            const real x = (b->v[axis][i] - centre) * per_spacing + last * R(0.5);
+            number[axis][i] = (F(most)(F(least)(x, last), 0) + MAGIC) - MAGIC;
+        }
+    }
+}
+
+/* Metrics of all levels of an axis relative to level number[].  The half-spacing
+ * is taken in two parts, of which the first has so few digits that its
+ * multiples are exact: e then has no rounding error of the level's size. */
 static inline void F(axis_metrics)(const struct pdm_plan *plan, int axis, const struct F(block) *b,
-                                   real metric[PDM_MAX_LEVELS][LANES])
+                                   const real number[LANES], real metric[PDM_MAX_LEVELS][LANES])
 {
     const int levels = plan->levels[axis];
     const real a = (real)plan->half_spacing[axis], centre = (real)plan->centre[axis];
     const real a_high = (a + a * SPLIT) - a * SPLIT;
     const real a_low = (real)(plan->half_spacing[axis] - (double)a_high);
-    const real per_spacing = R(0.5) / a, last = (real)(levels - 1);
-    real nearest[LANES], e[LANES];
+    const real per_a = (real)(1 / plan->half_spacing[axis]), last = (real)(levels - 1);
+    real e[LANES], scale[LANES];
     EACH_LANE
     {
-        const real v = b->v[axis][i] - centre;
-        const real number = F(most)(F(least)(v * per_spacing + last * R(0.5), last), 0);
-        nearest[i] = (number + MAGIC) - MAGIC;
-        const real level = nearest[i] + nearest[i] - last;
-        e[i] = (v - level * a_high) - level * a_low;
+        const real level = number[i] + number[i] - last;
+        e[i] = ((b->v[axis][i] - centre - level * a_high) - level * a_low) * per_a;
+        scale[i] = F(over_noise)(plan->spacing_squared[axis], b->noise[i]);
     }
     for (int j = 0; j < levels; j++)
         EACH_LANE
         {
-            const real w = (nearest[i] - (real)j) * a;
-            metric[j][i] = F(least)(R(4.) * (b->scale[i] * (w * (e[i] + w))), LARGEST);
+            const real spacings = number[i] - (real)j;
+            const real m = scale[i] * (spacings * (spacings + e[i]));
+            metric[j][i] = F(most)(F(least)(m, LARGEST), -LARGEST);
         }
+}
+
+/* The nearest point of the grid: levels on both axes, and the label.  Where the
+ * grid has holes, it need not be where the nearest levels cross. */
+static void F(nearest_point)(const struct pdm_plan *plan, const struct F(block) *b,
+                             real metric[2][PDM_MAX_LEVELS][LANES], real number[2][LANES],
+                             uint32_t label[LANES])
+{
+    real best[LANES];
+    F(grid_nearest)(plan, b, number);
+    F(axis_metrics)(plan, 0, b, number[0], metric[0]);
+    F(axis_metrics)(plan, 1, b, number[1], metric[1]);
+    EACH_LANE best[i] = LARGEST;
+    EACH_LANE label[i] = 0;
+    for (int x = 0; x < plan->boxes; x++) {
+        const struct pdm_box *box = &plan->box[x];
+        real near[2][LANES];
+        uint32_t slot[3][LANES], level_of[2][LANES], candidate[LANES];
+        for (int axis = 0; axis < 2; axis++) {
+            const struct pdm_level *level = pdm_levels(plan, box, axis);
+            EACH_LANE near[axis][i] = metric[axis][level[0].number][i];
+            EACH_LANE slot[axis][i] = level[0].slot;
+            EACH_LANE level_of[axis][i] = level[0].number;
+            for (int j = 1; j < box->axis[axis].count; j++) {
+                const real *m = metric[axis][level[j].number];
+                const uint32_t s = level[j].slot, number_of = level[j].number;
+                EACH_LANE slot[axis][i] = m[i] < near[axis][i] ? s : slot[axis][i];
+                EACH_LANE level_of[axis][i] = m[i] < near[axis][i] ? number_of : level_of[axis][i];
+                EACH_LANE near[axis][i] = F(least)(m[i], near[axis][i]);
+            }
+        }
+        EACH_LANE slot[2][i] = candidate[i] = 0;
+        for (int k = 0; k < plan->bits; k++) {
+            const struct pdm_bit bit = box->bit[k];
+            const int shift = bit.axis == 2 ? 0 : box->axis[bit.axis].patterns - 1 - bit.pattern;
+            EACH_LANE candidate[i] =
+                candidate[i] << 1 | ((slot[bit.axis][i] >> shift & 1) ^ (uint32_t)bit.invert);
+        }
+        EACH_LANE
+        {
+            const int better = x == 0 || near[0][i] + near[1][i] < best[i];
+            label[i] = better ? candidate[i] : label[i];
+            number[0][i] = better ? (real)(int32_t)level_of[0][i] : number[0][i];
+            number[1][i] = better ? (real)(int32_t)level_of[1][i] : number[1][i];
+            best[i] = better ? near[0][i] + near[1][i] : best[i];
+        }
+    }
+}
+
+static void F(boxes_slice)(const struct pdm_plan *plan, struct F(block) *b)
+{
+    real metric[2][PDM_MAX_LEVELS][LANES], number[2][LANES];
+    F(nearest_point)(plan, b, metric, number, b->label);
+}
+
+/* Metrics of both axes, relative to the nearest point: with one box that is
+ * where the nearest levels cross.  With more, metrics relative to a crossing
+ * that is no point would be large where the LLR is small. */
+static void F(grid_metrics)(const struct pdm_plan *plan, const struct F(block) *b,
+                            real metric[2][PDM_MAX_LEVELS][LANES])
+{
+    real number[2][LANES];
+    uint32_t label[LANES];
+    if (plan->boxes == 1)
+        F(grid_nearest)(plan, b, number);
+    else
+        F(nearest_point)(plan, b, metric, number, label);
+    F(axis_metrics)(plan, 0, b, number[0], metric[0]);
+    F(axis_metrics)(plan, 1, b, number[1], metric[1]);
 }
 
 /* Metrics by slot for one axis of a box, the prior of the axis's bits added;
@@ -95,40 +178,61 @@ static inline void F(constant_cost)(const struct pdm_plan *plan, const struct pd
                     F(most)(box->bit[k].invert ? b->prior[k][i] : -b->prior[k][i], 0);
 }
 
-/* Halve the slots until one is left: half[p][value] becomes the sum (the
- * minimum) over the slots whose pattern p has that value, slot[0] that over
- * all.  The slots are overwritten. */
-#define DEFINE_HALVE(name, combine)                                                             \
-    static inline void F(name)(int patterns, real slot[PDM_MAX_LEVELS][LANES],                  \
-                               real half[PDM_MAX_PATTERNS][2][LANES])                           \
-    {                                                                                           \
-        real side[PDM_MAX_LEVELS / 2][LANES];                                                   \
-        for (int p = 0; p < patterns; p++) {                                                    \
-            const int rest = 1 << (patterns - 1 - p);                                           \
-            for (int value = 0; value < 2; value++) {                                           \
-                for (int s = 0; s < rest; s++)                                                  \
-                    EACH_LANE side[s][i] = slot[value * rest + s][i];                           \
-                for (int step = rest / 2; step > 0; step /= 2)                                  \
-                    for (int s = 0; s < step; s++)                                              \
-                        EACH_LANE side[s][i] = combine(side[s][i], side[s + step][i]);          \
-                EACH_LANE half[p][value][i] = side[0][i];                                       \
-            }                                                                                   \
-            for (int s = 0; s < rest; s++)                                                      \
-                EACH_LANE slot[s][i] = combine(slot[s][i], slot[rest + s][i]);                  \
-        }                                                                                       \
-    }
+/* side[0] = all of side[], combined in pairs. */
+#define REDUCE(side, count, combine)                                                            \
+    for (int step = (count) / 2; step > 0; step /= 2)                                           \
+        for (int s = 0; s < step; s++)                                                          \
+            EACH_LANE side[s][i] = combine(side[s][i], side[s + step][i]);
 #define PLUS(a, b) ((a) + (b))
-DEFINE_HALVE(halve_sum, PLUS)
-DEFINE_HALVE(halve_least, F(least))
+
+/* Halve the slots until one is left: half[p][value] becomes the minimum over
+ * the slots whose pattern p has that value, slot[0] that over all.  The slots
+ * are overwritten. */
+static inline void F(halve_least)(int patterns, real slot[PDM_MAX_LEVELS][LANES],
+                                  real half[PDM_MAX_PATTERNS][2][LANES])
+{
+    real side[PDM_MAX_LEVELS / 2][LANES];
+    for (int p = 0; p < patterns; p++) {
+        const int rest = 1 << (patterns - 1 - p);
+        for (int value = 0; value < 2; value++) {
+            for (int s = 0; s < rest; s++)
+                EACH_LANE side[s][i] = slot[value * rest + s][i];
+            REDUCE(side, rest, F(least))
+            EACH_LANE half[p][value][i] = side[0][i];
+        }
+        for (int s = 0; s < rest; s++)
+            EACH_LANE slot[s][i] = F(least)(slot[s][i], slot[rest + s][i]);
+    }
+}
+
+/* The same for sums, and half[p][2] their difference: summed from differences
+ * of slots that differ in this pattern alone, it keeps its digits where the two
+ * sums are nearly equal. */
+static inline void F(halve_sum)(int patterns, real slot[PDM_MAX_LEVELS][LANES],
+                                real half[PDM_MAX_PATTERNS][3][LANES])
+{
+    real side[PDM_MAX_LEVELS / 2][LANES];
+    for (int p = 0; p < patterns; p++) {
+        const int rest = 1 << (patterns - 1 - p);
+        for (int value = 0; value < 3; value++) {
+            for (int s = 0; s < rest; s++)
+                EACH_LANE side[s][i] = value < 2 ? slot[value * rest + s][i]
+                                                 : slot[s][i] - slot[rest + s][i];
+            REDUCE(side, rest, PLUS)
+            EACH_LANE half[p][value][i] = side[0][i];
+        }
+        for (int s = 0; s < rest; s++)
+            EACH_LANE slot[s][i] = slot[s][i] + slot[rest + s][i];
+    }
+}
 #undef PLUS
-#undef DEFINE_HALVE
+#undef REDUCE
 
 static void F(boxes_max_log)(const struct pdm_plan *plan, struct F(block) *b)
 {
     real metric[2][PDM_MAX_LEVELS][LANES], slot[PDM_MAX_LEVELS][LANES];
     real half[2][PDM_MAX_PATTERNS][2][LANES], all[3][LANES], best[PDM_MAX_BITS][2][LANES];
-    F(axis_metrics)(plan, 0, b, metric[0]);
-    F(axis_metrics)(plan, 1, b, metric[1]);
+    F(grid_metrics)(plan, b, metric);
     for (int k = 0; k < plan->bits; k++)
         EACH_LANE best[k][0][i] = best[k][1][i] = LARGEST;
     for (int x = 0; x < plan->boxes; x++) {
@@ -215,10 +319,9 @@ static void F(boxes_bit)(const struct pdm_plan *plan, const struct F(block) *b,
 static void F(boxes_exact)(const struct pdm_plan *plan, struct F(block) *b)
 {
     real metric[2][PDM_MAX_LEVELS][LANES], slot[PDM_MAX_LEVELS][LANES];
-    real half[2][PDM_MAX_PATTERNS][2][LANES], all[3][LANES], total[PDM_MAX_BITS][2][LANES];
+    real half[2][PDM_MAX_PATTERNS][3][LANES], all[3][LANES], total[PDM_MAX_BITS][3][LANES];
     real near[PDM_MAX_BOXES][3][LANES], least[LANES];
-    F(axis_metrics)(plan, 0, b, metric[0]);
-    F(axis_metrics)(plan, 1, b, metric[1]);
+    F(grid_metrics)(plan, b, metric);
 
     /* The least metric of each axis of each box, and of all points. */
     EACH_LANE least[i] = LARGEST;
@@ -235,7 +338,7 @@ static void F(boxes_exact)(const struct pdm_plan *plan, struct F(block) *b)
     }
 
     for (int k = 0; k < plan->bits; k++)
-        EACH_LANE total[k][0][i] = total[k][1][i] = 0;
+        EACH_LANE total[k][0][i] = total[k][1][i] = total[k][2][i] = 0;
     for (int x = 0; x < plan->boxes; x++) {
         const struct pdm_box *box = &plan->box[x];
         for (int axis = 0; axis < 2; axis++) {
@@ -260,15 +363,18 @@ static void F(boxes_exact)(const struct pdm_plan *plan, struct F(block) *b)
         for (int k = 0; k < plan->bits; k++) {
             const struct pdm_bit bit = box->bit[k];
             if (bit.axis == 2) {
-                real *t = total[k][bit.invert];
+                real *t = total[k][bit.invert], *difference = total[k][2];
                 EACH_LANE t[i] += all[2][i];
+                EACH_LANE difference[i] += bit.invert ? -all[2][i] : all[2][i];
             } else {
-                for (int value = 0; value < 2; value++) {
-                    real *t = total[k][value];
-                    const real *h = half[bit.axis][bit.pattern][value ^ bit.invert];
-                    const real *other = all[1 - bit.axis];
-                    EACH_LANE t[i] += h[i] * other[i];
-                }
+                const real *zero = half[bit.axis][bit.pattern][bit.invert];
+                const real *one = half[bit.axis][bit.pattern][1 - bit.invert];
+                const real *difference = half[bit.axis][bit.pattern][2];
+                const real *other = all[1 - bit.axis];
+                EACH_LANE total[k][0][i] += zero[i] * other[i];
+                EACH_LANE total[k][1][i] += one[i] * other[i];
+                EACH_LANE total[k][2][i] +=
+                    (bit.invert ? -difference[i] : difference[i]) * other[i];
             }
         }
     }
@@ -279,7 +385,7 @@ static void F(boxes_exact)(const struct pdm_plan *plan, struct F(block) *b)
         {
             /* a sum that underflowed to 0 must not reach the logarithm */
             const real zero = F(most)(total[k][0][i], SMALLEST), one = F(most)(total[k][1][i], SMALLEST);
-            b->llr[k][i] = F(log_ratio)(zero, one);
+            b->llr[k][i] = F(log_ratio)(zero, one, total[k][2][i]);
             far |= F(magnitude)(b->llr[k][i]) > LARGEST_RATIO;
         }
         if (!far)
@@ -289,48 +395,9 @@ static void F(boxes_exact)(const struct pdm_plan *plan, struct F(block) *b)
             F(boxes_bit)(plan, b, metric, k, value, metric_of[value], sum[value]);
         EACH_LANE
         {
-            const real l = (metric_of[1][i] - metric_of[0][i]) + F(log_ratio)(sum[0][i], sum[1][i]);
+            const real l = (metric_of[1][i] - metric_of[0][i]) +
+                           F(log_ratio)(sum[0][i], sum[1][i], sum[0][i] - sum[1][i]);
             b->llr[k][i] = F(magnitude)(b->llr[k][i]) > LARGEST_RATIO ? l : b->llr[k][i];
-        }
-    }
-}
-
-static void F(boxes_slice)(const struct pdm_plan *plan, struct F(block) *b)
-{
-    real metric[2][PDM_MAX_LEVELS][LANES], best[LANES];
-    F(axis_metrics)(plan, 0, b, metric[0]);
-    F(axis_metrics)(plan, 1, b, metric[1]);
-    EACH_LANE best[i] = LARGEST;
-    EACH_LANE b->label[i] = 0;
-    for (int x = 0; x < plan->boxes; x++) {
-        const struct pdm_box *box = &plan->box[x];
-        real near[2][LANES];
-        uint32_t slot[3][LANES];
-        for (int axis = 0; axis < 2; axis++) {
-            const struct pdm_level *level = pdm_levels(plan, box, axis);
-            EACH_LANE near[axis][i] = metric[axis][level[0].number][i];
-            EACH_LANE slot[axis][i] = level[0].slot;
-            for (int j = 1; j < box->axis[axis].count; j++) {
-                const real *m = metric[axis][level[j].number];
-                const uint32_t s = level[j].slot;
-                EACH_LANE slot[axis][i] = m[i] < near[axis][i] ? s : slot[axis][i];
-                EACH_LANE near[axis][i] = F(least)(m[i], near[axis][i]);
-            }
-        }
-        EACH_LANE slot[2][i] = 0;
-        uint32_t label[LANES];
-        EACH_LANE label[i] = 0;
-        for (int k = 0; k < plan->bits; k++) {
-            const struct pdm_bit bit = box->bit[k];
-            const int shift = bit.axis == 2 ? 0 : box->axis[bit.axis].patterns - 1 - bit.pattern;
-            EACH_LANE label[i] =
-                label[i] << 1 | ((slot[bit.axis][i] >> shift & 1) ^ (uint32_t)bit.invert);
-        }
-        EACH_LANE
-        {
-            const int better = near[0][i] + near[1][i] < best[i];
-            b->label[i] = better ? label[i] : b->label[i];
-            best[i] = better ? near[0][i] + near[1][i] : best[i];
         }
     }
 }

@@ -54,12 +54,13 @@ static inline real F(exp_minus)(real t)
     return x < (real)ZERO_WEIGHT ? power : 0;
 }
 
-/* ln(a / b) for normal a, b > 0: absolute error below 2.5 u (1 + |result|),
- * and relative to the result where a / b is within [1/sqrt 2, sqrt 2].
- * The exponents are taken off first, so that a / b may be beyond the type's
- * range; ln of what remains is 2 atanh((a - b) / (a + b)), where a - b has no
- * rounding error: near a = b a quotient less 1 would lose all digits. */
-static inline real F(log_ratio)(real a, real b)
+/* ln(a / b) for normal a, b > 0, given their difference d = a - b: absolute
+ * error below 2 u (1 + |result|) beyond what a, b and d bring along.  The
+ * exponents are taken off first, so that a / b may be beyond the type's range;
+ * ln of what remains is 2 atanh((a - b) / (a + b)), where near a = b only the
+ * rounding of d counts: a quotient less 1 would lose all digits there, and sums
+ * a and b may be known less well than the sum d of their terms' differences. */
+static inline real F(log_ratio)(real a, real b, real d)
 {
 #if REAL_BITS == 32
     const real ln2_high = 0.6931152344f, ln2_low = 3.19461833e-5f, c0 = 0.6666668653f,
@@ -78,8 +79,12 @@ static inline real F(log_ratio)(real a, real b)
     const real up = ma > mb * sqrt2 ? R(1.) : R(0.), down = mb > ma * sqrt2 ? R(1.) : R(0.);
     e = e + (up - down);
     ma = ma - R(0.5) * up * ma;
-    mb = mb - R(0.5) * down * mb;
-    const real z = (ma - mb) / (ma + mb), w = z * z;
+    /* 2^-exponent of b, for d */
+    const real unit = F(from_word)(((word)(2 * EXPONENT_ONE) << FRACTION_BITS) - (wb & ~fraction));
+    const real half = R(1.) - R(0.5) * down;
+    mb = mb * half;
+    const real difference = e == 0 ? d * unit * half : ma - mb;
+    const real z = difference / (ma + mb), w = z * z;
 #if REAL_BITS == 32
     const real p = c0 + w * (c1 + w * c2);
 #else

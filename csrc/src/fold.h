@@ -16,18 +16,19 @@ static void F(fold_max_log)(const struct pdm_plan *plan, struct F(block) *b, int
         const struct pdm_fold *fold = &plan->fold[axis];
         const real a = (real)plan->half_spacing[axis], centre = (real)plan->centre[axis];
         const real per_spacing = R(0.5) / a;
-        real threshold = a * (real)(1 << fold->depths) * R(0.5), v[LANES];
+        real threshold = a * (real)(1 << fold->depths) * R(0.5), v[LANES], slope[LANES];
         EACH_LANE v[i] = b->v[axis][i] - centre;
+        EACH_LANE slope[i] = F(over_noise)(4 * plan->half_spacing[axis], b->noise[i]);
         for (int d = 0; d < fold->depths; d++) {
             real *llr = b->llr[fold->bit[d]];
-            const real slope = fold->negative[d] ? -R(4.) * a : R(4.) * a;
+            const real sign = fold->negative[d] ? -R(1.) : R(1.);
             const real most = linear ? 0 : (real)((1 << (fold->depths - 1 - d)) - 1);
             EACH_LANE
             {
                 const real x = F(magnitude)(v[i]);
                 const real r = F(least)((x * per_spacing - R(0.5) + MAGIC) - MAGIC, most);
-                const real l = b->scale[i] * slope * (r + 1) * (x - r * a);
-                llr[i] = v[i] < 0 ? -l : l;
+                const real l = slope[i] * (r + 1) * (x - r * a);
+                llr[i] = v[i] < 0 ? -sign * l : sign * l;
                 v[i] = x - threshold;
             }
             threshold = threshold * R(0.5);

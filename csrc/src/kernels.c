@@ -35,6 +35,8 @@ union double_bits {
     uint64_t w;
 };
 
+#define NO_INFORMATION (1e308 * 10)     /* an infinite noise variance */
+
 static inline double power_of_two(int exponent)
 {
     const union double_bits b = {.w = (uint64_t)(exponent + 1023) << 52};

@@ -103,6 +103,41 @@ static size_t level_number(const struct pdm_plan *plan, size_t axis, double x)
     return (size_t)(i + (plan->levels[axis] - 1) / 2.0 + 0.5);
 }
 
+/* a^2 - square for a near its root: the product is taken in two parts, as the
+ * difference needs more digits than a double holds (Dekker 1971). */
+static double square_less(double a, double square)
+{
+    const double c = 0x1.0000002p+27 * a, high = c - (c - a), low = a - high;
+    const double p = a * a, rest = ((high * high - p) + 2 * high * low) + low * low;
+    return (p - square) + rest;
+}
+
+/* Points of unit mean energy, given to the last digit or so, are taken as the
+ * exact grid: a^2 = 1 / E with E the mean energy of odd whole coordinates, which
+ * is known better than from the rounded points. */
+static void find_spacing(struct pdm_plan *plan, const double *iq)
+{
+    double energy = 0;
+    for (size_t i = 0; i < plan->order; i++)
+        for (size_t axis = 0; axis < 2; axis++) {
+            const double level = 2.0 * (double)level_number(plan, axis, iq[2 * i + axis]) -
+                                 (plan->levels[axis] - 1);
+            energy += level * level;
+        }
+    energy /= plan->order;
+    double *a = plan->half_spacing;
+    const int wide = plan->levels[0] < plan->levels[1];
+    const int same = plan->levels[0] == 1 || plan->levels[1] == 1 ||
+                     absolute(a[0] - a[1]) <= 8 * 0x1p-52 * a[wide];
+    const int unit = same && plan->centre[0] == 0 && plan->centre[1] == 0 &&
+                     absolute(a[wide] * a[wide] * energy - 1) <= 16 * 0x1p-52;
+    for (size_t axis = 0; axis < 2; axis++) {
+        if (unit)
+            a[axis] = a[wide] - square_less(a[wide], 1 / energy) / (2 * a[wide]);
+        plan->spacing_squared[axis] = unit ? 4 / energy : 4 * (a[axis] * a[axis]);
+    }
+}
+
 /* Label at (along, across), the "along" axis being I or Q. */
 static int32_t label_at(const struct grid *g, size_t along_axis, size_t along, size_t across)
 {
@@ -403,6 +438,8 @@ int pdm_plan_init(pdm_plan *plan, size_t plan_nbytes, const double *points_iq,
     while (peak * plan->unit < 0.5)
         plan->unit *= 2;
 
+    plan->centre[1] = plan->half_spacing[1] = 0;
+    plan->levels[1] = 0;
     int grid = find_axis(plan, 0, points_iq, scratch, peak);
     if (grid) {
         sort(points_iq, 1, scratch, order);
@@ -412,6 +449,7 @@ int pdm_plan_init(pdm_plan *plan, size_t plan_nbytes, const double *points_iq,
     plan->boxes = 0;
     plan->used = sizeof *plan;
     plan->family = PDM_POINTS;
+    plan->spacing_squared[0] = plan->spacing_squared[1] = 0;
     if (grid && cells <= 2 * order) {
         const struct grid g = {(int32_t *)(void *)scratch, {plan->levels[0], plan->levels[1]},
                                plan->bits};
@@ -423,6 +461,7 @@ int pdm_plan_init(pdm_plan *plan, size_t plan_nbytes, const double *points_iq,
             grid &= *cell == ABSENT;    /* two points within the tolerance: no grid */
             *cell = (int32_t)labels[i];
         }
+        find_spacing(plan, points_iq);
         if (grid && find_boxes(plan, &g))
             plan->family = find_fold(plan) ? PDM_FOLD : PDM_BOXES;
     }
@@ -430,16 +469,16 @@ int pdm_plan_init(pdm_plan *plan, size_t plan_nbytes, const double *points_iq,
         double *coordinate = (double *)(void *)tail;
         plan->boxes = 0;
         plan->levels[0] = plan->levels[1] = 0;
-        plan->centre[0] = plan->centre[1] = plan->half_spacing[0] = plan->half_spacing[1] = 0;
         for (size_t i = 0; i < order; i++) {
             coordinate[labels[i]] = points_iq[2 * i] * plan->unit;
             coordinate[order + labels[i]] = points_iq[2 * i + 1] * plan->unit;
         }
         plan->used = (uint32_t)(sizeof *plan + 16 * order);
     }
-    for (size_t axis = 0; axis < 2; axis++) {
+    for (size_t axis = 0; axis < 2; axis++) {   /* of no meaning for points */
         plan->centre[axis] *= plan->unit;
         plan->half_spacing[axis] *= plan->unit;
+        plan->spacing_squared[axis] *= plan->unit * plan->unit;
     }
     plan->magic = PDM_MAGIC;
     return PDM_OK;

@@ -6,22 +6,58 @@
  * 4 w.(e + w) / N0.  They are formed in double for both types: points need not
  * lie on round numbers, and the difference of two of them has to keep its
  * digits.  Labels are taken in chunks, whose low bits are summed by halving as
- * on an axis of a box. */
+ * on an axis of a box.
+ *
+ * Where several points are equally near (the middle of a ring) the two parts of
+ * the product w.(e + w) cancel, and at high Es/N0 what is left of a double would
+ * not do for a float64 result.  There every coordinate is taken in two parts,
+ * of which the first is a whole number of 2^-COARSE: products of first parts
+ * are then exact, and so is their sum. */
 
 enum { F(CHUNK_BITS) = 6 };
+
+/* A number in two parts. */
+struct F(pair) {
+    double high, low;
+};
+
+/* Coordinates of points and of samples near them are below 4: with 23 bits
+ * behind the point, a product of two differences has 2 (23 + 3) = 52 bits.  A
+ * sample farther off stays whole; its products need no more than a double. */
+static inline struct F(pair) F(two_parts)(double x)
+{
+#if REAL_BITS == 32
+    const struct F(pair) parts = {x, 0};
+#else
+    const double round = 0x1.8p+52 * 0x1p-23, coarse = (x + round) - round;
+    const double high = x > -4 && x < 4 ? coarse : x;
+    const struct F(pair) parts = {high, x - high};
+#endif
+    return parts;
+}
+
+/* w (e + w), w = (s - x) / 2, e from s to the sample. */
+static inline struct F(pair) F(axis_product)(struct F(pair) s, struct F(pair) x, struct F(pair) e)
+{
+    const double w = (s.high - x.high) * 0.5, t = e.high + w;
+#if REAL_BITS == 32
+    const struct F(pair) product = {w * t, 0};
+#else
+    const double w_low = (s.low - x.low) * 0.5, t_low = e.low + w_low;
+    const struct F(pair) product = {w * t, w * t_low + w_low * t + w_low * t_low};
+#endif
+    return product;
+}
 
 struct F(cloud) {
     const struct pdm_plan *plan;
     const struct F(block) *block;
-    double sx[LANES], sy[LANES], ex[LANES], ey[LANES], scale[LANES];
+    double s_high[2][LANES], s_low[2][LANES];   /* the nearest point */
+    double e_high[2][LANES], e_low[2][LANES];   /* from there to the sample */
+    double scale[LANES];
     int low_bits, chunks;
     real low_cost[1 << F(CHUNK_BITS)][LANES];   /* priors of the low bits, by slot */
 };
-
-static inline double F(product)(double wx, double wy, double ex, double ey)
-{
-    return wx * (ex + wx) + wy * (ey + wy);
-}
 
 /* The nearest point of each lane, found relative to the point of label 0. */
 static void F(points_nearest)(const struct pdm_plan *plan, const struct F(block) *b,
@@ -40,7 +76,7 @@ static void F(points_nearest)(const struct pdm_plan *plan, const struct F(block)
         const double wx = (x[0] - x[j]) * 0.5, wy = (y[0] - y[j]) * 0.5;
         EACH_LANE
         {
-            const double m = F(product)(wx, wy, ex[i], ey[i]);
+            const double m = wx * (ex[i] + wx) + wy * (ey[i] + wy);
             nearest[i] = m < best[i] ? j : nearest[i];
             best[i] = m < best[i] ? m : best[i];
         }
@@ -55,19 +91,21 @@ static inline real F(prior_cost)(real prior, int value)
 static void F(prepare_cloud)(const struct pdm_plan *plan, const struct F(block) *b,
                              struct F(cloud) *c)
 {
-    const double *x = pdm_points(plan), *y = x + plan->order;
     uint32_t nearest[LANES];
     F(points_nearest)(plan, b, nearest);
     c->plan = plan;
     c->block = b;
-    EACH_LANE
-    {
-        c->sx[i] = x[nearest[i]];
-        c->sy[i] = y[nearest[i]];
-        c->ex[i] = (double)b->v[0][i] - c->sx[i];
-        c->ey[i] = (double)b->v[1][i] - c->sy[i];
-        c->scale[i] = (double)b->scale[i];
-    }
+    for (size_t axis = 0; axis < 2; axis++)
+        EACH_LANE
+        {
+            const struct F(pair) s = F(two_parts)(pdm_points(plan)[axis * plan->order + nearest[i]]);
+            const struct F(pair) v = F(two_parts)((double)b->v[axis][i]);
+            c->s_high[axis][i] = s.high;
+            c->s_low[axis][i] = s.low;
+            c->e_high[axis][i] = v.high - s.high;
+            c->e_low[axis][i] = v.low - s.low;
+        }
+    EACH_LANE c->scale[i] = 4 / b->noise[i];
     c->low_bits = plan->bits < F(CHUNK_BITS) ? plan->bits : F(CHUNK_BITS);
     c->chunks = 1 << (plan->bits - c->low_bits);
     if (b->has_prior)
@@ -90,13 +128,19 @@ static void F(chunk_metrics)(const struct F(cloud) *c, int chunk, real slot[PDM_
 {
     const int count = 1 << c->low_bits;
     const double *x = pdm_points(c->plan) + (size_t)chunk * (size_t)count, *y = x + c->plan->order;
-    for (int s = 0; s < count; s++)
+    for (int s = 0; s < count; s++) {
+        const struct F(pair) px = F(two_parts)(x[s]), py = F(two_parts)(y[s]);
         EACH_LANE
         {
-            const double wx = (c->sx[i] - x[s]) * 0.5, wy = (c->sy[i] - y[s]) * 0.5;
-            const double m = 4 * (c->scale[i] * F(product)(wx, wy, c->ex[i], c->ey[i]));
+            const struct F(pair) sx = {c->s_high[0][i], c->s_low[0][i]},
+                                 sy = {c->s_high[1][i], c->s_low[1][i]},
+                                 ex = {c->e_high[0][i], c->e_low[0][i]},
+                                 ey = {c->e_high[1][i], c->e_low[1][i]};
+            const struct F(pair) a = F(axis_product)(sx, px, ex), b = F(axis_product)(sy, py, ey);
+            const double m = c->scale[i] * ((a.high + b.high) + (a.low + b.low));
             slot[s][i] = (real)(m < (double)LARGEST ? m : (double)LARGEST);
         }
+    }
     if (c->block->has_prior) {
         real cost[LANES];
         EACH_LANE cost[i] = 0;
@@ -169,7 +213,8 @@ static void F(points_far)(const struct F(cloud) *c, const uint8_t far[PDM_MAX_BI
             EACH_LANE
             {
                 const real l = (best[k][1][i] - best[k][0][i]) +
-                               F(log_ratio)(sum[k][0][i], sum[k][1][i]);
+                               F(log_ratio)(sum[k][0][i], sum[k][1][i],
+                                              sum[k][0][i] - sum[k][1][i]);
                 b->llr[k][i] = F(magnitude)(b->llr[k][i]) > LARGEST_RATIO ? l : b->llr[k][i];
             }
 }
@@ -177,36 +222,39 @@ static void F(points_far)(const struct F(cloud) *c, const uint8_t far[PDM_MAX_BI
 static void F(points_exact)(const struct pdm_plan *plan, struct F(block) *b)
 {
     struct F(cloud) c;
-    real slot[PDM_MAX_LEVELS][LANES], half[PDM_MAX_PATTERNS][2][LANES], least[LANES];
-    real sum[PDM_MAX_BITS][2][LANES], lost[PDM_MAX_BITS][2][LANES];
+    real slot[PDM_MAX_LEVELS][LANES], half[PDM_MAX_PATTERNS][3][LANES], least[LANES];
+    real sum[PDM_MAX_BITS][3][LANES], lost[PDM_MAX_BITS][3][LANES], best[PDM_MAX_BITS][2][LANES];
     uint8_t far[PDM_MAX_BITS];
     F(prepare_cloud)(plan, b, &c);
     const int high = plan->bits - c.low_bits;
 
     EACH_LANE least[i] = 0;
     if (b->has_prior) {
-        F(points_least)(&c, sum);
-        EACH_LANE least[i] = F(least)(sum[0][0][i], sum[0][1][i]);
+        F(points_least)(&c, best);
+        EACH_LANE least[i] = F(least)(best[0][0][i], best[0][1][i]);
     }
     for (int k = 0; k < plan->bits; k++)
-        EACH_LANE sum[k][0][i] = sum[k][1][i] = lost[k][0][i] = lost[k][1][i] = 0;
+        for (int value = 0; value < 3; value++)
+            EACH_LANE sum[k][value][i] = lost[k][value][i] = 0;
     for (int chunk = 0; chunk < c.chunks; chunk++) {
         F(chunk_metrics)(&c, chunk, slot);
         for (int s = 0; s < 1 << c.low_bits; s++)
             EACH_LANE slot[s][i] = F(exp_minus)(slot[s][i] - least[i]);
         F(halve_sum)(c.low_bits, slot, half);
         for (int k = 0; k < plan->bits; k++)
-            for (int value = 0; value < 2; value++) {
+            for (int value = 0; value < 3; value++) {
                 const real *h = k >= high ? half[k - high][value] : slot[0];
-                if (k < high && F(chunk_bit)(&c, chunk, k) != value)
+                const int bit = k < high ? F(chunk_bit)(&c, chunk, k) : value;
+                const real sign = value == 2 && k < high && bit ? -R(1.) : R(1.);
+                if (value < 2 && bit != value)
                     continue;
                 /* Kahan's compensated sum over up to 1024 chunks: one after
                  * another they would add up rounding errors */
                 EACH_LANE
                 {
-                    const real term = h[i] - lost[k][value][i], s = sum[k][value][i] + term;
-                    lost[k][value][i] = (s - sum[k][value][i]) - term;
-                    sum[k][value][i] = s;
+                    const real old = sum[k][value][i], term = sign * h[i] - lost[k][value][i];
+                    sum[k][value][i] = old + term;
+                    lost[k][value][i] = (sum[k][value][i] - old) - term;
                 }
             }
     }
@@ -215,7 +263,8 @@ static void F(points_exact)(const struct pdm_plan *plan, struct F(block) *b)
         far[k] = 0;
         EACH_LANE
         {
-            b->llr[k][i] = F(log_ratio)(F(most)(sum[k][0][i], SMALLEST), F(most)(sum[k][1][i], SMALLEST));
+            b->llr[k][i] = F(log_ratio)(F(most)(sum[k][0][i], SMALLEST),
+                                        F(most)(sum[k][1][i], SMALLEST), sum[k][2][i]);
             far[k] |= F(magnitude)(b->llr[k][i]) > LARGEST_RATIO;
         }
         any |= far[k];

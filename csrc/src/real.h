@@ -13,6 +13,7 @@ typedef float real32;
 #define LANES PDM_LANES
 #define LARGEST 0x1.fffffep+127f
 #define SMALLEST 0x1p-126f           /* the smallest normal number */
+#define FARTHEST 0x1p+107            /* of a coordinate: times 2^18 still finite */
 #define FRACTION_BITS 23
 #define EXPONENT_ONE 127u           /* exponent field of 1 */
 #define MAGIC 0x1.8p+23f            /* x + MAGIC rounds x to a whole number, half to even */
@@ -31,6 +32,7 @@ typedef double real64;
 #define LANES (PDM_LANES / 2)
 #define LARGEST 0x1.fffffffffffffp+1023
 #define SMALLEST 0x1p-1022
+#define FARTHEST 0x1p+1003
 #define FRACTION_BITS 52
 #define EXPONENT_ONE 1023u
 #define MAGIC 0x1.8p+52
@@ -56,6 +58,7 @@ typedef double real64;
 #undef LANES
 #undef LARGEST
 #undef SMALLEST
+#undef FARTHEST
 #undef FRACTION_BITS
 #undef EXPONENT_ONE
 #undef MAGIC
