@@ -292,7 +292,7 @@ class SoftDemapper:
             if known.dtype.kind not in "fiu":
                 raise TypeError(f"prior must be real numbers (LLRs), got dtype {known.dtype}")
             with np.errstate(over="ignore"):
-                known = np.ascontiguousarray(_spread("prior", known, result_shape), real)
+                known = np.asarray(_spread("prior", known, result_shape), real, order="C")
         if out is None:
             result = np.empty(result_shape, self.dtype)
         else:
@@ -436,21 +436,21 @@ def _as_complex(array: npt.NDArray[Any], real: np.dtype[Any]) -> npt.NDArray[Any
     """C-contiguous complex array whose parts are of type `real`."""
     wanted = np.dtype(np.complex128 if real == np.float64 else np.complex64)
     if array.dtype == wanted:
-        return np.ascontiguousarray(array)
+        return np.asarray(array, order="C")
     with np.errstate(over="ignore"):
-        result = np.ascontiguousarray(array, wanted)
+        result = np.asarray(array, wanted, order="C")
     if not np.isfinite(result).all():
         parts = np.ascontiguousarray(array, np.complex128).view(np.float64)
-        result = _hold(result.view(real), parts).view(wanted)
+        result = _hold(np.ascontiguousarray(result).view(real), parts).view(wanted).reshape(array.shape)
     return result
 
 
 def _as_positive_real(array: npt.NDArray[Any], real: np.dtype[Any]) -> npt.NDArray[Any]:
     """C-contiguous array of type `real`; positive numbers stay finite and > 0."""
     if array.dtype == real:
-        return np.ascontiguousarray(array)
+        return np.asarray(array, order="C")
     with np.errstate(over="ignore", under="ignore"):
-        result = np.ascontiguousarray(array, real)
+        result = np.asarray(array, real, order="C")
     vanished = (result == 0) & (array > 0)
     if vanished.any():
         result = np.where(vanished, np.finfo(real).smallest_subnormal, result)

@@ -222,7 +222,8 @@ static void F(points_far)(const struct F(cloud) *c, const uint8_t far[PDM_MAX_BI
 static void F(points_exact)(const struct pdm_plan *plan, struct F(block) *b)
 {
     struct F(cloud) c;
-    real slot[PDM_MAX_LEVELS][LANES], half[PDM_MAX_PATTERNS][3][LANES], least[LANES];
+    real slot[PDM_MAX_LEVELS][LANES], half[PDM_MAX_PATTERNS][2][LANES], least[LANES];
+    real difference[PDM_MAX_PATTERNS][LANES];
     real sum[PDM_MAX_BITS][3][LANES], lost[PDM_MAX_BITS][3][LANES], best[PDM_MAX_BITS][2][LANES];
     uint8_t far[PDM_MAX_BITS];
     F(prepare_cloud)(plan, b, &c);
@@ -240,10 +241,13 @@ static void F(points_exact)(const struct pdm_plan *plan, struct F(block) *b)
         F(chunk_metrics)(&c, chunk, slot);
         for (int s = 0; s < 1 << c.low_bits; s++)
             EACH_LANE slot[s][i] = F(exp_minus)(slot[s][i] - least[i]);
+        F(differences)(c.low_bits, slot, difference);
         F(halve_sum)(c.low_bits, slot, half);
         for (int k = 0; k < plan->bits; k++)
             for (int value = 0; value < 3; value++) {
-                const real *h = k >= high ? half[k - high][value] : slot[0];
+                const real *h = k < high    ? slot[0]
+                                : value < 2 ? half[k - high][value]
+                                            : difference[k - high];
                 const int bit = k < high ? F(chunk_bit)(&c, chunk, k) : value;
                 const real sign = value == 2 && k < high && bit ? -R(1.) : R(1.);
                 if (value < 2 && bit != value)
