@@ -138,6 +138,12 @@ class SoftDemapper:
     dtype: np.dtype[Any]
     family: str
     boxes: int
+    _plan: Any
+    _memory: Any
+    _call: Any
+    _real: np.dtype[Any]
+    _pointer: Any
+    _settings: tuple[Any, Any]
 
     def __init__(
         self,
@@ -252,7 +258,7 @@ class SoftDemapper:
         extrinsic : bool
             Take the prior off the result again.
         out : ndarray of shape (..., n) and of the output's dtype, optional
-            C-contiguous and writeable; filled and returned. It may be the
+            C-contiguous, aligned and writeable; filled and returned. It may be the
             `prior` array itself, and must not overlap any other input.
         threads : int
             Number of threads for large arrays; the result does not depend on it.
@@ -292,7 +298,7 @@ class SoftDemapper:
             if known.dtype.kind not in "fiu":
                 raise TypeError(f"prior must be real numbers (LLRs), got dtype {known.dtype}")
             with np.errstate(over="ignore"):
-                known = np.asarray(_spread("prior", known, result_shape), real, order="C")
+                known = _ready(_spread("prior", known, result_shape), real)
         if out is None:
             result = np.empty(result_shape, self.dtype)
         else:
@@ -377,7 +383,7 @@ class SoftDemapper:
 
     def _samples(self, y: npt.ArrayLike) -> npt.NDArray[Any]:
         samples = np.asarray(y)
-        if samples.dtype not in (np.complex64, np.complex128):
+        if samples.dtype.kind != "c" or samples.dtype.itemsize > 16:
             raise TypeError(f"y must be complex64 or complex128, got dtype {samples.dtype}")
         return _as_complex(samples, self._real)
 
@@ -394,8 +400,8 @@ class SoftDemapper:
             raise TypeError(f"out must have dtype {self.dtype}, got {out.dtype}")
         if out.shape != shape:
             raise ValueError(f"out must have shape {shape}, got {out.shape}")
-        if not (out.flags.c_contiguous and out.flags.writeable):
-            raise ValueError("out must be C-contiguous and writeable")
+        if not out.flags.carray:
+            raise ValueError("out must be C-contiguous, aligned and writeable")
         for name, array in inputs.items():
             if not isinstance(array, np.ndarray) or not np.may_share_memory(out, array):
                 continue
@@ -423,6 +429,12 @@ def _spread(name: str, array: npt.NDArray[Any], shape: tuple[int, ...]) -> npt.N
         raise ValueError(f"{name} of shape {array.shape} does not broadcast to {shape}") from None
 
 
+def _ready(array: npt.NDArray[Any], dtype: np.dtype[Any]) -> npt.NDArray[Any]:
+    """`array` as `dtype`, C-contiguous and aligned, as C code needs it."""
+    result = np.asarray(array, dtype, order="C")
+    return result if result.flags.aligned else result.copy()
+
+
 def _hold(converted: npt.NDArray[Any], given: npt.NDArray[Any]) -> npt.NDArray[Any]:
     """Finite values that a narrower type turned infinite become its largest value."""
     lost = np.isinf(converted) & np.isfinite(given)
@@ -435,11 +447,9 @@ def _hold(converted: npt.NDArray[Any], given: npt.NDArray[Any]) -> npt.NDArray[A
 def _as_complex(array: npt.NDArray[Any], real: np.dtype[Any]) -> npt.NDArray[Any]:
     """C-contiguous complex array whose parts are of type `real`."""
     wanted = np.dtype(np.complex128 if real == np.float64 else np.complex64)
-    if array.dtype == wanted:
-        return np.asarray(array, order="C")
     with np.errstate(over="ignore"):
-        result = np.asarray(array, wanted, order="C")
-    if not np.isfinite(result).all():
+        result = _ready(array, wanted)
+    if array.dtype != wanted and not np.isfinite(result).all():
         parts = np.ascontiguousarray(array, np.complex128).view(np.float64)
         result = _hold(np.ascontiguousarray(result).view(real), parts).view(wanted).reshape(array.shape)
     return result
@@ -447,10 +457,10 @@ def _as_complex(array: npt.NDArray[Any], real: np.dtype[Any]) -> npt.NDArray[Any
 
 def _as_positive_real(array: npt.NDArray[Any], real: np.dtype[Any]) -> npt.NDArray[Any]:
     """C-contiguous array of type `real`; positive numbers stay finite and > 0."""
-    if array.dtype == real:
-        return np.asarray(array, order="C")
     with np.errstate(over="ignore", under="ignore"):
-        result = np.asarray(array, real, order="C")
+        result = _ready(array, real)
+    if array.dtype == real:
+        return result
     vanished = (result == 0) & (array > 0)
     if vanished.any():
         result = np.where(vanished, np.finfo(real).smallest_subnormal, result)
@@ -620,7 +630,7 @@ def isa() -> str:
 
 def available_isas() -> list[str]:
     """Names of the levels that this machine can run, fastest first."""
-    names = []
+    names: list[str] = []
     while (name := lib.pdm_available_isa(len(names))) != ffi.NULL:
         names.append(ffi.string(name).decode())
     return names

@@ -4,7 +4,9 @@
 
 struct F(block) {
     real v[2][LANES];           /* y / h in the plan's units, I and Q */
-    double noise[LANES];        /* N0 / |h|^2 in the plan's units; infinite: no information */
+    double noise[LANES];        /* N0 / |h|^2 in the plan's units, at least LEAST_NOISE; infinite:
+                                   no information */
+    real lift[LANES];           /* what LLRs have to grow by where it was below LEAST_NOISE */
     real poison[LANES];         /* 0, or NaN where y, h or a prior is not usable */
     real prior[PDM_MAX_BITS][LANES];    /* positive means 0; set where has_prior */
     real llr[PDM_MAX_BITS][LANES];      /* positive means 0 */
@@ -19,11 +21,16 @@ static inline real F(hold)(double x)
     return (real)(x < -FARTHEST ? -FARTHEST : x > FARTHEST ? FARTHEST : x);
 }
 
-/* x / noise, for x > 0: finite, and 0 where there is no information. */
-static inline real F(over_noise)(double x, double noise)
+/* x / noise for x > 0; 0 where there is no information. */
+static inline real F(over_noise)(double x, double noise) { return (real)(x / noise); }
+
+/* So small a noise variance would make metrics overflow and their differences
+ * meaningless; LLRs are proportional to 1 / N0 down there. */
+static inline void F(set_noise)(struct F(block) *b, int i, double noise)
 {
-    const double q = x / noise;
-    return (real)(q < (double)LARGEST / 4 ? q : (double)LARGEST / 4);
+    const double lift = LEAST_NOISE / noise;
+    b->lift[i] = (real)(lift < 1 ? 1 : lift < (double)LARGEST ? lift : (double)LARGEST);
+    b->noise[i] = noise > LEAST_NOISE ? noise : LEAST_NOISE;
 }
 
 /* y / h and N0 / |h|^2, in double whatever the type: for float32 the result is
@@ -32,24 +39,24 @@ static inline real F(over_noise)(double x, double noise)
 static inline void F(equalise)(struct F(block) *b, int i, const real *y, const real *h, double noise,
                                double unit)
 {
-    const double yr = (double)y[0] * 0.25, yi = (double)y[1] * 0.25;
+    const double yr = (double)y[0] * 0.125, yi = (double)y[1] * 0.125;
     double hr = (double)h[0], hi = (double)h[1];
     const double size_r = hr < 0 ? -hr : hr, size_i = hi < 0 ? -hi : hi;
     const double size = size_r > size_i ? size_r : size_i;
     const union double_bits size_bits = {.r = size};
     int e = (int)(size_bits.w >> 52 & 2047) - 1023;
-    e = e < -1000 ? -1000 : e > 1000 ? 1000 : e;
+    e = e < -1000 ? -1000 : e > 1022 ? 1022 : e;
     const double down = power_of_two(-e);
     hr *= down;
     hi *= down;
     const double power = hr * hr + hi * hi;
     const int silent = !(power > 0);    /* h = 0, or NaN */
-    const double back = 4 * down * unit, divisor = silent ? 1 : power;
+    const double back = 8 * down * unit, divisor = silent ? 1 : power;
     const real poison = (real)((yr - yr) + (yi - yi) + (hr - hr) + (hi - hi));
     const int usable = !silent && poison == 0;
     b->v[0][i] = usable ? F(hold)((yr * hr + yi * hi) / divisor * back) : 0;
     b->v[1][i] = usable ? F(hold)((yi * hr - yr * hi) / divisor * back) : 0;
-    b->noise[i] = usable ? noise * (unit * unit) * down / divisor * down : NO_INFORMATION;
+    F(set_noise)(b, i, usable ? noise * (unit * unit) * down / divisor * down : NO_INFORMATION);
     b->poison[i] = poison;
 }
 
@@ -76,13 +83,13 @@ static void F(load)(const struct pdm_call *call, size_t first, int count, struct
         }
         const double square = unit * unit;
         for (int i = 0; i < count; i++)
-            b->noise[i] = b->poison[i] == 0
-                              ? (noise ? (double)noise[(size_t)i * call->noise_stride] : 1) * square
-                              : NO_INFORMATION;
+            F(set_noise)(b, i, b->poison[i] == 0
+                                   ? (noise ? (double)noise[(size_t)i * call->noise_stride] : 1) * square
+                                   : NO_INFORMATION);
     }
     for (int i = count; i < LANES; i++) {
         b->v[0][i] = b->v[1][i] = b->poison[i] = 0;
-        b->noise[i] = NO_INFORMATION;
+        F(set_noise)(b, i, NO_INFORMATION);
     }
 
     b->has_prior = call->prior != 0;
@@ -109,6 +116,7 @@ static inline real F(finish)(const struct pdm_settings *settings, const struct F
                              int i)
 {
     real l = b->llr[k][i];
+    l = F(magnitude)(l) > R(1e6) ? l * b->lift[i] : l;  /* not the ln 2 of a tie */
     if (b->has_prior) {
         l = b->noise[i] < NO_INFORMATION ? l : b->prior[k][i];
         l = settings->extrinsic ? l - b->prior[k][i] : l;

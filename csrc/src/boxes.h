@@ -21,32 +21,67 @@ struct F(view) {
     uint32_t slot[LANES];       /* ... and its slot, if it was searched for */
     real e[LANES];              /* from there to the sample, in half-spacings */
     real scale[LANES];          /* (2 a)^2 / N0 */
+    real scale_low[LANES], scaled_e_low[LANES]; /* what rounding took off scale and e */
 };
 
-/* Metric of a level relative to the nearest one. */
-static inline real F(level_metric)(const struct F(view) *view, int i, real number)
+/* All boxes.  Metrics are in units of 1 / per_nat: in nats for max-log; as
+ * exponents of 2 for sums, so that they go into exp2_minus unrounded. */
+struct F(scene) {
+    struct F(view) view[PDM_MAX_BOXES][2];
+    real farther[PDM_MAX_BOXES][LANES];     /* the box's nearest point than that of all ... */
+    real farther_low[PDM_MAX_BOXES][LANES]; /* ... and what its rounding took off */
+    double per_nat;
+};
+
+/* Metric of a level relative to the nearest one, for scale 1. */
+static inline real F(level_distance)(const struct F(view) *view, int i, real number)
 {
     const real spacings = view->number[i] - number;
-    const real m = view->scale[i] * (spacings * (spacings + view->e[i]));
-    return F(most)(F(least)(m, LARGEST), -LARGEST);
+    return spacings * (spacings + view->e[i]);
 }
 
-/* Sets e and scale once number is known.  The half-spacing is taken in two
- * parts, of which the first has so few digits that its multiples are exact: e
- * then has no rounding error of the level's size, and is exactly 1 half way
- * between levels -1 and 1, where a factor 1 / a would leave a rounding error. */
-static inline void F(set_view)(const struct pdm_plan *plan, int axis, const struct F(block) *b,
-                               struct F(view) *view)
+/* What the roundings of e and scale took off scale x distance.  e matters where
+ * level and sample are far from the nearest level on the same side of it, as
+ * across a hole of the grid: spacings and e cancel there. */
+static inline real F(level_low)(const struct F(view) *view, int i, real number, real distance)
 {
-    const real a = (real)plan->half_spacing[axis], centre = (real)plan->centre[axis];
-    const real a_high = (a + a * SPLIT) - a * SPLIT;
-    const real a_low = (real)(plan->half_spacing[axis] - (double)a_high);
-    const real last = (real)(plan->levels[axis] - 1);
+    const real spacings = view->number[i] - number;
+    return view->scale_low[i] * distance + view->scaled_e_low[i] * spacings;
+}
+
+/* Sets e and scale once number is known, both in two parts.  The half-spacing
+ * is split so that multiples of its first part are exact: e then has no
+ * rounding error of the level's size, and is a whole number where the sample
+ * is a whole number of half-spacings away. */
+static inline void F(set_view)(const struct pdm_plan *plan, int axis, const struct F(block) *b,
+                               double per_nat, struct F(view) *view)
+{
+    const double a = plan->half_spacing[axis], centre = plan->centre[axis];
+    const double a_high = (a + a * 512) - a * 512, a_low = a - a_high;  /* 9 bits fewer */
+    const double last = plan->levels[axis] - 1;
+    const double square = plan->spacing_squared[axis], square_low = plan->spacing_squared_low[axis];
+    const double units = square * per_nat;
+    const double units_low = product_low(square, per_nat) + square_low * per_nat +
+                             (per_nat == 1 ? 0 : square * LOG2_E_LOW);
     EACH_LANE
     {
-        const real level = view->number[i] + view->number[i] - last;
-        view->e[i] = ((b->v[axis][i] - centre - level * a_high) - level * a_low) / a;
-        view->scale[i] = F(over_noise)(plan->spacing_squared[axis], b->noise[i]);
+        const double level = 2 * (double)view->number[i] - last;
+        const double v = (double)b->v[axis][i] - centre, l = level * a_high;
+        const double way = v - l, part = way - v;
+        const double way_low = ((v - (way - part)) - (l + part)) - level * a_low;
+        const double e = (way + way_low) / a;
+        const double e_low = ((way - e * a) - product_low(e, a) + way_low) / a;
+        view->e[i] = (real)e;
+
+        const double noise = b->noise[i];
+        view->scale[i] = F(over_noise)(units, noise);
+        const double scale = (double)view->scale[i];
+        const double scale_low = ((units - scale * noise) - product_low(scale, noise) + units_low) / noise;
+
+        /* At extremes, where Dekker's product overflows, it does not matter. */
+        const int moderate = e > -0x1p+80 && e < 0x1p+80 && scale > 0x1p-80 && scale < 0x1p+80;
+        view->scale_low[i] = moderate ? (real)scale_low : 0;
+        view->scaled_e_low[i] = moderate ? (real)(scale * ((e - (double)(real)e) + e_low)) : 0;
     }
 }
 
@@ -68,7 +103,7 @@ static inline void F(place)(const struct pdm_plan *plan, int axis, const struct 
 /* View of a box's axis whose levels need not be all of the grid's: the nearest
  * one is searched for. */
 static void F(search_view)(const struct pdm_plan *plan, const struct pdm_box *box, int axis,
-                           const struct F(block) *b, struct F(view) *view)
+                           const struct F(block) *b, double per_nat, struct F(view) *view)
 {
     const struct pdm_level *level = pdm_levels(plan, box, axis);
     real place[LANES], best[LANES];
@@ -85,50 +120,68 @@ static void F(search_view)(const struct pdm_plan *plan, const struct pdm_box *bo
             best[i] = F(least)(way, best[i]);
         }
     }
-    F(set_view)(plan, axis, b, view);
+    F(set_view)(plan, axis, b, per_nat, view);
 }
 
-/* Views of all boxes, and how much farther each box's nearest point is than
- * the nearest point of all. */
-static void F(view_boxes)(const struct pdm_plan *plan, const struct F(block) *b,
-                          struct F(view) view[PDM_MAX_BOXES][2], real farther[PDM_MAX_BOXES][LANES])
+static void F(view_boxes)(const struct pdm_plan *plan, const struct F(block) *b, double per_nat,
+                          struct F(scene) *scene)
 {
+    scene->per_nat = per_nat;
     if (plan->boxes == 1) {
         for (int axis = 0; axis < 2; axis++) {
-            F(place)(plan, axis, b, 1, view[0][axis].number);
-            F(set_view)(plan, axis, b, &view[0][axis]);
+            F(place)(plan, axis, b, 1, scene->view[0][axis].number);
+            F(set_view)(plan, axis, b, per_nat, &scene->view[0][axis]);
         }
-        EACH_LANE farther[0][i] = 0;
+        EACH_LANE scene->farther[0][i] = scene->farther_low[0][i] = 0;
         return;
     }
-    real least[LANES];
+    double far[PDM_MAX_BOXES][LANES], low[PDM_MAX_BOXES][LANES], least[LANES];
     struct F(view) grid[2];
     for (int axis = 0; axis < 2; axis++) {
         F(place)(plan, axis, b, 1, grid[axis].number);
-        F(set_view)(plan, axis, b, &grid[axis]);
+        F(set_view)(plan, axis, b, per_nat, &grid[axis]);
     }
-    EACH_LANE least[i] = LARGEST;
+    EACH_LANE least[i] = (double)LARGEST;
     for (int x = 0; x < plan->boxes; x++) {
-        for (int axis = 0; axis < 2; axis++)
-            F(search_view)(plan, &plan->box[x], axis, b, &view[x][axis]);
-        EACH_LANE
-        {
-            farther[x][i] = F(level_metric)(&grid[0], i, view[x][0].number[i]) +
-                            F(level_metric)(&grid[1], i, view[x][1].number[i]);
-            farther[x][i] = F(least)(farther[x][i], LARGEST);
-            least[i] = F(least)(least[i], farther[x][i]);
+        EACH_LANE far[x][i] = low[x][i] = 0;
+        for (int axis = 0; axis < 2; axis++) {
+            F(search_view)(plan, &plan->box[x], axis, b, per_nat, &scene->view[x][axis]);
+            /* A whole box hangs on this one number, so it is formed in two parts. */
+            EACH_LANE
+            {
+                const double spacings =
+                    (double)grid[axis].number[i] - (double)scene->view[x][axis].number[i];
+                const double distance = spacings * (spacings + (double)grid[axis].e[i]);
+                const double scale = (double)grid[axis].scale[i], m = scale * distance;
+                const double sum = far[x][i] + m, part = sum - far[x][i];
+                low[x][i] += ((far[x][i] - (sum - part)) + (m - part)) +
+                             (m < 0x1p+900 ? product_low(scale, distance) : 0) +
+                             (double)grid[axis].scale_low[i] * distance +
+                             (double)grid[axis].scaled_e_low[i] * spacings;
+                far[x][i] = sum < (double)LARGEST ? sum : (double)LARGEST;
+            }
         }
+        EACH_LANE least[i] = least[i] < far[x][i] ? least[i] : far[x][i];
     }
     for (int x = 0; x < plan->boxes; x++)
-        EACH_LANE farther[x][i] -= least[i];
+        EACH_LANE
+        {
+            const double way = far[x][i] - least[i];
+            scene->farther[x][i] = (real)way;
+            scene->farther_low[x][i] =
+                way > 0 && way < 0x1p+100 ? (real)((way - (double)(real)way) + low[x][i]) : 0;
+        }
 }
 
-/* Metrics by slot for one axis of a box, the prior of the axis's bits added;
- * a slot without a level gets the largest metric.  Returns the slots. */
-static inline int F(slot_metrics)(const struct pdm_plan *plan, const struct pdm_box *box, int axis,
-                                  const struct F(block) *b, const struct F(view) *view,
+/* Metrics by slot for one axis of box x, the prior of the axis's bits added; a
+ * slot without a level gets the largest metric.  Returns the slots. */
+static inline int F(slot_metrics)(const struct pdm_plan *plan, int x, int axis,
+                                  const struct F(block) *b, const struct F(scene) *scene,
                                   real slot[PDM_MAX_LEVELS][LANES])
 {
+    const struct pdm_box *box = &plan->box[x];
+    const struct F(view) *view = &scene->view[x][axis];
+    const real unit = (real)scene->per_nat;
     const struct pdm_level *level = pdm_levels(plan, box, axis);
     const int patterns = box->axis[axis].patterns, slots = 1 << patterns;
     const int count = box->axis[axis].count;
@@ -138,7 +191,7 @@ static inline int F(slot_metrics)(const struct pdm_plan *plan, const struct pdm_
     for (int j = 0; j < count; j++) {
         const real number = (real)level[j].number;
         real *metric = slot[level[j].slot];
-        EACH_LANE metric[i] = F(level_metric)(view, i, number);
+        EACH_LANE metric[i] = view->scale[i] * F(level_distance)(view, i, number);
     }
     if (!b->has_prior)
         return slots;
@@ -152,8 +205,8 @@ static inline int F(slot_metrics)(const struct pdm_plan *plan, const struct pdm_
         if (bit.axis == axis)
             EACH_LANE
             {
-                cost[bit.pattern][bit.invert][i] += F(most)(-b->prior[k][i], 0);
-                cost[bit.pattern][1 - bit.invert][i] += F(most)(b->prior[k][i], 0);
+                cost[bit.pattern][bit.invert][i] += F(most)(-b->prior[k][i], 0) * unit;
+                cost[bit.pattern][1 - bit.invert][i] += F(most)(b->prior[k][i], 0) * unit;
             }
     }
     for (int s = 0; s < slots; s++)
@@ -163,16 +216,50 @@ static inline int F(slot_metrics)(const struct pdm_plan *plan, const struct pdm_
     return slots;
 }
 
-/* The cost in a box of bits that are the same all over it. */
-static inline void F(constant_cost)(const struct pdm_plan *plan, const struct pdm_box *box,
-                                    const struct F(block) *b, real cost[LANES])
+/* Weights 2^-metric by slot, relative to near[]. */
+static inline void F(slot_weights)(const struct pdm_plan *plan, int x, int axis,
+                                  const struct F(block) *b, const struct F(scene) *scene,
+                                  const real near[LANES], real slot[PDM_MAX_LEVELS][LANES])
 {
-    EACH_LANE cost[i] = 0;
+    const struct pdm_box *box = &plan->box[x];
+    const struct pdm_level *level = pdm_levels(plan, box, axis);
+    const struct F(view) *view = &scene->view[x][axis];
+    const int slots = 1 << box->axis[axis].patterns, count = box->axis[axis].count;
+    if (b->has_prior) {
+        F(slot_metrics)(plan, x, axis, b, scene, slot);
+        for (int s = 0; s < slots; s++)
+            EACH_LANE slot[s][i] = F(exp2_minus)(slot[s][i] - near[i], 0);
+        return;
+    }
+    if (count < slots)
+        for (int s = 0; s < slots; s++)
+            EACH_LANE slot[s][i] = 0;
+    for (int j = 0; j < count; j++) {
+        const real number = (real)level[j].number;
+        real *weight = slot[level[j].slot];
+        EACH_LANE
+        {
+            const real distance = F(level_distance)(view, i, number);
+            weight[i] = F(exp2_minus)(view->scale[i] * distance,
+                                      F(level_low)(view, i, number, distance));
+        }
+    }
+}
+
+/* What all points of box x cost: the way to it, and the prior of bits that are
+ * the same all over it. */
+static inline void F(box_cost)(const struct pdm_plan *plan, int x, const struct F(block) *b,
+                               const struct F(scene) *scene, real cost[LANES])
+{
+    const real unit = (real)scene->per_nat;
+    EACH_LANE cost[i] = scene->farther[x][i];
     if (b->has_prior)
-        for (int k = 0; k < plan->bits; k++)
-            if (box->bit[k].axis == 2)
+        for (int k = 0; k < plan->bits; k++) {
+            const struct pdm_bit bit = plan->box[x].bit[k];
+            if (bit.axis == 2)
                 EACH_LANE cost[i] +=
-                    F(most)(box->bit[k].invert ? b->prior[k][i] : -b->prior[k][i], 0);
+                    F(most)(bit.invert ? b->prior[k][i] : -b->prior[k][i], 0) * unit;
+        }
 }
 
 /* side[0] = all of side[], combined in pairs. */
@@ -229,18 +316,17 @@ static inline void F(differences)(int patterns, real slot[PDM_MAX_LEVELS][LANES]
 
 static void F(boxes_max_log)(const struct pdm_plan *plan, struct F(block) *b)
 {
-    struct F(view) view[PDM_MAX_BOXES][2];
-    real farther[PDM_MAX_BOXES][LANES], cost[LANES], slot[PDM_MAX_LEVELS][LANES];
+    struct F(scene) scene;
+    real cost[LANES], slot[PDM_MAX_LEVELS][LANES];
     real half[2][PDM_MAX_PATTERNS][2][LANES], all[2][LANES], best[PDM_MAX_BITS][2][LANES];
-    F(view_boxes)(plan, b, view, farther);
+    F(view_boxes)(plan, b, 1, &scene);
     for (int k = 0; k < plan->bits; k++)
         EACH_LANE best[k][0][i] = best[k][1][i] = LARGEST;
     for (int x = 0; x < plan->boxes; x++) {
         const struct pdm_box *box = &plan->box[x];
-        F(constant_cost)(plan, box, b, cost);
-        EACH_LANE cost[i] += farther[x][i];
+        F(box_cost)(plan, x, b, &scene, cost);
         for (int axis = 0; axis < 2; axis++) {
-            F(slot_metrics)(plan, box, axis, b, &view[x][axis], slot);
+            F(slot_metrics)(plan, x, axis, b, &scene, slot);
             F(halve_least)(box->axis[axis].patterns, slot, half[axis]);
             EACH_LANE all[axis][i] = slot[0][i];
         }
@@ -268,8 +354,7 @@ static void F(boxes_max_log)(const struct pdm_plan *plan, struct F(block) *b)
  * underflows, however far the points are.  Terms that cannot change the
  * rounded result count as 0, which lets whole levels be skipped. */
 static void F(boxes_bit)(const struct pdm_plan *plan, const struct F(block) *b,
-                         struct F(view) view[PDM_MAX_BOXES][2],
-                         real farther[PDM_MAX_BOXES][LANES], int k, int value, real least[LANES],
+                         const struct F(scene) *scene, int k, int value, real least[LANES],
                          real sum[LANES])
 {
     real near[PDM_MAX_BOXES][3][LANES], slot[PDM_MAX_LEVELS][LANES];
@@ -283,7 +368,7 @@ static void F(boxes_bit)(const struct pdm_plan *plan, const struct F(block) *b,
             if (bit.axis == 2 && bit.invert != value)
                 continue;
             for (int axis = 0; axis < 2; axis++) {
-                const int slots = F(slot_metrics)(plan, box, axis, b, &view[x][axis], slot);
+                const int slots = F(slot_metrics)(plan, x, axis, b, scene, slot);
                 const int shift = box->axis[axis].patterns - 1 - bit.pattern;
                 if (pass == 0)
                     EACH_LANE near[x][axis][i] = LARGEST;
@@ -306,9 +391,8 @@ static void F(boxes_bit)(const struct pdm_plan *plan, const struct F(block) *b,
                 }
             }
             if (pass == 0) {
-                F(constant_cost)(plan, box, b, near[x][2]);
-                EACH_LANE near[x][2][i] =
-                    near[x][0][i] + near[x][1][i] + (near[x][2][i] + farther[x][i]);
+                F(box_cost)(plan, x, b, scene, near[x][2]);
+                EACH_LANE near[x][2][i] += near[x][0][i] + near[x][1][i];
                 EACH_LANE least[i] = F(least)(least[i], near[x][2][i]);
             } else {
                 EACH_LANE sum[i] += F(exp_minus)(near[x][2][i] - least[i]) *
@@ -319,12 +403,12 @@ static void F(boxes_bit)(const struct pdm_plan *plan, const struct F(block) *b,
 
 static void F(boxes_exact)(const struct pdm_plan *plan, struct F(block) *b)
 {
-    struct F(view) view[PDM_MAX_BOXES][2];
-    real farther[PDM_MAX_BOXES][LANES], slot[PDM_MAX_LEVELS][LANES];
+    struct F(scene) scene;
+    real slot[PDM_MAX_LEVELS][LANES];
     real half[2][PDM_MAX_PATTERNS][2][LANES], difference[2][PDM_MAX_PATTERNS][LANES];
     real all[3][LANES], total[PDM_MAX_BITS][3][LANES];
     real near[PDM_MAX_BOXES][3][LANES], least[LANES];
-    F(view_boxes)(plan, b, view, farther);
+    F(view_boxes)(plan, b, LOG2_E, &scene);
 
     /* The least metric of each axis of each box, and of all points: 0 but for
      * the prior. */
@@ -333,15 +417,14 @@ static void F(boxes_exact)(const struct pdm_plan *plan, struct F(block) *b)
         for (int axis = 0; axis < 2; axis++) {
             EACH_LANE near[x][axis][i] = 0;
             if (b->has_prior) {
-                const int slots =
-                    F(slot_metrics)(plan, &plan->box[x], axis, b, &view[x][axis], slot);
+                const int slots = F(slot_metrics)(plan, x, axis, b, &scene, slot);
                 EACH_LANE near[x][axis][i] = slot[0][i];
                 for (int s = 1; s < slots; s++)
                     EACH_LANE near[x][axis][i] = F(least)(near[x][axis][i], slot[s][i]);
             }
         }
-        F(constant_cost)(plan, &plan->box[x], b, near[x][2]);
-        EACH_LANE near[x][2][i] = near[x][0][i] + near[x][1][i] + (near[x][2][i] + farther[x][i]);
+        F(box_cost)(plan, x, b, &scene, near[x][2]);
+        EACH_LANE near[x][2][i] += near[x][0][i] + near[x][1][i];
         EACH_LANE least[i] = F(least)(least[i], near[x][2][i]);
     }
 
@@ -350,9 +433,7 @@ static void F(boxes_exact)(const struct pdm_plan *plan, struct F(block) *b)
     for (int x = 0; x < plan->boxes; x++) {
         const struct pdm_box *box = &plan->box[x];
         for (int axis = 0; axis < 2; axis++) {
-            const int slots = F(slot_metrics)(plan, box, axis, b, &view[x][axis], slot);
-            for (int s = 0; s < slots; s++)
-                EACH_LANE slot[s][i] = F(exp_minus)(slot[s][i] - near[x][axis][i]);
+            F(slot_weights)(plan, x, axis, b, &scene, near[x][axis], slot);
             F(differences)(box->axis[axis].patterns, slot, difference[axis]);
             F(halve_sum)(box->axis[axis].patterns, slot, half[axis]);
             EACH_LANE all[axis][i] = slot[0][i];
@@ -363,7 +444,7 @@ static void F(boxes_exact)(const struct pdm_plan *plan, struct F(block) *b)
         } else {
             EACH_LANE
             {
-                const real weight = F(exp_minus)(near[x][2][i] - least[i]);
+                const real weight = F(exp2_minus)(near[x][2][i] - least[i], scene.farther_low[x][i]);
                 all[0][i] *= weight;
                 all[2][i] = all[0][i] * all[1][i];
                 all[1][i] *= weight;
@@ -398,9 +479,11 @@ static void F(boxes_exact)(const struct pdm_plan *plan, struct F(block) *b)
         }
         if (!far)
             continue;
+        if (scene.per_nat != 1)
+            F(view_boxes)(plan, b, 1, &scene);
         real metric_of[2][LANES], sum[2][LANES];
         for (int value = 0; value < 2; value++)
-            F(boxes_bit)(plan, b, view, farther, k, value, metric_of[value], sum[value]);
+            F(boxes_bit)(plan, b, &scene, k, value, metric_of[value], sum[value]);
         EACH_LANE
         {
             const real l = (metric_of[1][i] - metric_of[0][i]) +
@@ -412,24 +495,23 @@ static void F(boxes_exact)(const struct pdm_plan *plan, struct F(block) *b)
 
 static void F(boxes_slice)(const struct pdm_plan *plan, struct F(block) *b)
 {
-    struct F(view) view[PDM_MAX_BOXES][2];
-    real farther[PDM_MAX_BOXES][LANES];
-    F(view_boxes)(plan, b, view, farther);
+    struct F(scene) scene;
+    F(view_boxes)(plan, b, 1, &scene);
     EACH_LANE b->label[i] = 0;
     for (int x = plan->boxes - 1; x >= 0; x--) {
         const struct pdm_box *box = &plan->box[x];
         uint32_t candidate[LANES];
         if (plan->boxes == 1)
             for (int axis = 0; axis < 2; axis++)
-                F(search_view)(plan, box, axis, b, &view[x][axis]);
+                F(search_view)(plan, box, axis, b, 1, &scene.view[x][axis]);
         EACH_LANE candidate[i] = 0;
         for (int k = 0; k < plan->bits; k++) {
             const struct pdm_bit bit = box->bit[k];
             const int shift = bit.axis == 2 ? 0 : box->axis[bit.axis].patterns - 1 - bit.pattern;
-            const uint32_t *slot = view[x][bit.axis & 1].slot;
+            const uint32_t *slot = scene.view[x][bit.axis & 1].slot;
             const uint32_t mask = bit.axis < 2, invert = bit.invert;
             EACH_LANE candidate[i] = candidate[i] << 1 | ((slot[i] >> shift & mask) ^ invert);
         }
-        EACH_LANE b->label[i] = farther[x][i] == 0 ? candidate[i] : b->label[i];
+        EACH_LANE b->label[i] = scene.farther[x][i] == 0 ? candidate[i] : b->label[i];
     }
 }

@@ -26,33 +26,36 @@ static inline real F(least)(real a, real b) { return a < b ? a : b; }
 
 static inline real F(most)(real a, real b) { return a > b ? a : b; }
 
-/* exp(-t) for t >= -1, relative error below (1.5 + t) u; 0 where the result
- * would come near the subnormal numbers.  2^-x with x = t log2(e) is split at
- * the nearest whole number; its fraction's power is a polynomial. */
-static inline real F(exp_minus)(real t)
+/* 2^-(x + low) for x >= -1 and low a rounding error of x: relative error below
+ * 1.3 u; 0 where the result would come near the subnormal numbers.  x is split
+ * at the nearest whole number; the power of its fraction is a polynomial. */
+static inline real F(exp2_minus)(real x, real low)
 {
 #if REAL_BITS == 32
-    const real log2e = 1.442695022f, c0 = 0.6931471825f, c1 = 0.2402265072f, c2 = 0.05550356954f,
-               c3 = 0.009618083015f, c4 = 0.001339086331f, c5 = 0.0001545316336f;
+    const real c0 = 0.6931471825f, c1 = 0.2402265072f, c2 = 0.05550356954f, c3 = 0.009618083015f,
+               c4 = 0.001339086331f, c5 = 0.0001545316336f;
 #else
-    const real log2e = 1.44269504088896339, c0 = 0.693147180559945286, c1 = 0.240226506959100972,
-               c2 = 0.055504108664821597, c3 = 0.00961812910760688825, c4 = 0.00133335581464169356,
+    const real c0 = 0.693147180559945286, c1 = 0.240226506959100972, c2 = 0.055504108664821597,
+               c3 = 0.00961812910760688825, c4 = 0.00133335581464169356,
                c5 = 0.000154035304417360499, c6 = 0.0000152527338298361192,
                c7 = 1.32154425879216893e-6, c8 = 1.01780624458457737e-7,
                c9 = 7.07258594926922339e-9, c10 = 4.45496059818651856e-10;
 #endif
-    const real x = F(least)(t * log2e, (real)ZERO_WEIGHT);
-    const real shifted = x + MAGIC, f = (shifted - MAGIC) - x;
+    const real held = F(least)(x, (real)ZERO_WEIGHT);
+    const real shifted = held + MAGIC, f = ((shifted - MAGIC) - held) - low;
 #if REAL_BITS == 32
     const real p = c0 + f * (c1 + f * (c2 + f * (c3 + f * (c4 + f * c5))));
 #else
     const real high = c6 + f * (c7 + f * (c8 + f * (c9 + f * c10)));
     const real p = c0 + f * (c1 + f * (c2 + f * (c3 + f * (c4 + f * (c5 + f * high)))));
 #endif
-    const word scale = (MAGIC_WORD + EXPONENT_ONE - F(to_word)(shifted)) << FRACTION_BITS;
-    const real power = F(from_word)(scale) + F(from_word)(scale) * (f * p);
-    return x < (real)ZERO_WEIGHT ? power : 0;
+    const real scale =
+        F(from_word)((MAGIC_WORD + EXPONENT_ONE - F(to_word)(shifted)) << FRACTION_BITS);
+    return held < (real)ZERO_WEIGHT ? scale + scale * (f * p) : 0;
 }
+
+/* exp(-t): the product rounds, which costs t u more. */
+static inline real F(exp_minus)(real t) { return F(exp2_minus)(t * (real)LOG2_E, 0); }
 
 /* ln(a / b) for normal a, b > 0, given their difference d = a - b: absolute
  * error below 2 u (1 + |result|) beyond what a, b and d bring along.  The

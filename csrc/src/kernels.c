@@ -35,12 +35,22 @@ union double_bits {
     uint64_t w;
 };
 
+#define LOG2_E 1.44269504088896339
+#define LOG2_E_LOW 2.0355273740931033e-17
 #define NO_INFORMATION (1e308 * 10)     /* an infinite noise variance */
 
 static inline double power_of_two(int exponent)
 {
     const union double_bits b = {.w = (uint64_t)(exponent + 1023) << 52};
     return b.r;
+}
+
+/* a b less its rounded value (Dekker 1971), where nothing overflows. */
+static inline double product_low(double a, double b)
+{
+    const double ca = 0x1.0000002p+27 * a, ah = ca - (ca - a), al = a - ah;
+    const double cb = 0x1.0000002p+27 * b, bh = cb - (cb - b), bl = b - bh;
+    return ((ah * bh - a * b) + ah * bl + al * bh) + al * bl;
 }
 
 #define REAL_BITS 32

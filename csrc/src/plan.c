@@ -103,13 +103,13 @@ static size_t level_number(const struct pdm_plan *plan, size_t axis, double x)
     return (size_t)(i + (plan->levels[axis] - 1) / 2.0 + 0.5);
 }
 
-/* a^2 - square for a near its root: the product is taken in two parts, as the
- * difference needs more digits than a double holds (Dekker 1971). */
-static double square_less(double a, double square)
+/* a b less its rounded value: the digits that a double does not hold (Dekker
+ * 1971, who splits each factor into halves whose products are exact). */
+static double product_low(double a, double b)
 {
-    const double c = 0x1.0000002p+27 * a, high = c - (c - a), low = a - high;
-    const double p = a * a, rest = ((high * high - p) + 2 * high * low) + low * low;
-    return (p - square) + rest;
+    const double ca = 0x1.0000002p+27 * a, ah = ca - (ca - a), al = a - ah;
+    const double cb = 0x1.0000002p+27 * b, bh = cb - (cb - b), bl = b - bh;
+    return ((ah * bh - a * b) + ah * bl + al * bh) + al * bl;
 }
 
 /* Points of unit mean energy, given to the last digit or so, are taken as the
@@ -132,9 +132,18 @@ static void find_spacing(struct pdm_plan *plan, const double *iq)
     const int unit = same && plan->centre[0] == 0 && plan->centre[1] == 0 &&
                      absolute(a[wide] * a[wide] * energy - 1) <= 16 * 0x1p-52;
     for (size_t axis = 0; axis < 2; axis++) {
-        if (unit)
-            a[axis] = a[wide] - square_less(a[wide], 1 / energy) / (2 * a[wide]);
-        plan->spacing_squared[axis] = unit ? 4 / energy : 4 * (a[axis] * a[axis]);
+        double *square = &plan->spacing_squared[axis], *low = &plan->spacing_squared_low[axis];
+        if (unit) {
+            *square = 4 / energy;
+            *low = ((4 - *square * energy) - product_low(*square, energy)) / energy;
+        } else {
+            *square = 4 * (a[axis] * a[axis]);
+            *low = 4 * product_low(a[axis], a[axis]);
+        }
+    }
+    if (unit) { /* one step of Newton's method towards sqrt(1 / E) */
+        const double way = (a[wide] * a[wide] - 1 / energy) + product_low(a[wide], a[wide]);
+        a[0] = a[1] = a[wide] - way / (2 * a[wide]);
     }
 }
 
@@ -449,7 +458,8 @@ int pdm_plan_init(pdm_plan *plan, size_t plan_nbytes, const double *points_iq,
     plan->boxes = 0;
     plan->used = sizeof *plan;
     plan->family = PDM_POINTS;
-    plan->spacing_squared[0] = plan->spacing_squared[1] = 0;
+    for (size_t axis = 0; axis < 2; axis++)
+        plan->spacing_squared[axis] = plan->spacing_squared_low[axis] = 0;
     if (grid && cells <= 2 * order) {
         const struct grid g = {(int32_t *)(void *)scratch, {plan->levels[0], plan->levels[1]},
                                plan->bits};
@@ -479,6 +489,7 @@ int pdm_plan_init(pdm_plan *plan, size_t plan_nbytes, const double *points_iq,
         plan->centre[axis] *= plan->unit;
         plan->half_spacing[axis] *= plan->unit;
         plan->spacing_squared[axis] *= plan->unit * plan->unit;
+        plan->spacing_squared_low[axis] *= plan->unit * plan->unit;
     }
     plan->magic = PDM_MAGIC;
     return PDM_OK;

@@ -50,7 +50,7 @@ struct pdm_plan {
     double unit;            /* coordinates = points * unit */
     /* grids: coordinate of level i = centre + half_spacing (2 i - levels + 1) */
     double centre[2], half_spacing[2];
-    double spacing_squared[2];  /* (2 half_spacing)^2, to the last digit */
+    double spacing_squared[2], spacing_squared_low[2];  /* (2 half_spacing)^2, in two parts */
     uint16_t levels[2];
     struct pdm_fold fold[2];
     struct pdm_box box[PDM_MAX_BOXES];

@@ -54,7 +54,7 @@ struct F(cloud) {
     const struct F(block) *block;
     double s_high[2][LANES], s_low[2][LANES];   /* the nearest point */
     double e_high[2][LANES], e_low[2][LANES];   /* from there to the sample */
-    double scale[LANES];
+    double scale[LANES], per_nat;               /* units of metrics, as in boxes.h */
     int low_bits, chunks;
     real low_cost[1 << F(CHUNK_BITS)][LANES];   /* priors of the low bits, by slot */
 };
@@ -83,9 +83,10 @@ static void F(points_nearest)(const struct pdm_plan *plan, const struct F(block)
     }
 }
 
-static inline real F(prior_cost)(real prior, int value)
+static inline real F(prior_cost)(const struct F(cloud) *c, int k, int value, int i)
 {
-    return F(most)(value ? prior : -prior, 0);
+    const real prior = c->block->prior[k][i];
+    return F(most)(value ? prior : -prior, 0) * (real)c->per_nat;
 }
 
 static void F(prepare_cloud)(const struct pdm_plan *plan, const struct F(block) *b,
@@ -105,15 +106,21 @@ static void F(prepare_cloud)(const struct pdm_plan *plan, const struct F(block) 
             c->e_high[axis][i] = v.high - s.high;
             c->e_low[axis][i] = v.low - s.low;
         }
-    EACH_LANE c->scale[i] = 4 / b->noise[i];
     c->low_bits = plan->bits < F(CHUNK_BITS) ? plan->bits : F(CHUNK_BITS);
     c->chunks = 1 << (plan->bits - c->low_bits);
+}
+
+static void F(set_units)(double per_nat, struct F(cloud) *c)
+{
+    const struct F(block) *b = c->block;
+    c->per_nat = per_nat;
+    EACH_LANE c->scale[i] = 4 * per_nat / b->noise[i];
     if (b->has_prior)
         for (int s = 0; s < 1 << c->low_bits; s++) {
             EACH_LANE c->low_cost[s][i] = 0;
             for (int p = 0; p < c->low_bits; p++)
                 EACH_LANE c->low_cost[s][i] +=
-                    F(prior_cost)(b->prior[plan->bits - 1 - p][i], s >> p & 1);
+                    F(prior_cost)(c, c->plan->bits - 1 - p, s >> p & 1, i);
         }
 }
 
@@ -146,7 +153,7 @@ static void F(chunk_metrics)(const struct F(cloud) *c, int chunk, real slot[PDM_
         EACH_LANE cost[i] = 0;
         for (int k = 0; k < c->plan->bits - c->low_bits; k++)
             EACH_LANE cost[i] +=
-                F(prior_cost)(c->block->prior[k][i], F(chunk_bit)(c, chunk, k));
+                F(prior_cost)(c, k, F(chunk_bit)(c, chunk, k), i);
         for (int s = 0; s < count; s++)
             EACH_LANE slot[s][i] =
                 F(least)(slot[s][i] + (cost[i] + c->low_cost[s][i]), LARGEST);
@@ -177,6 +184,7 @@ static void F(points_max_log)(const struct pdm_plan *plan, struct F(block) *b)
     struct F(cloud) c;
     real best[PDM_MAX_BITS][2][LANES];
     F(prepare_cloud)(plan, b, &c);
+    F(set_units)(1, &c);
     F(points_least)(&c, best);
     for (int k = 0; k < plan->bits; k++)
         EACH_LANE b->llr[k][i] = best[k][1][i] - best[k][0][i];
@@ -185,11 +193,12 @@ static void F(points_max_log)(const struct pdm_plan *plan, struct F(block) *b)
 /* The sums of all bits in question relative to the nearest point with that bit
  * value, for blocks in which a sum relative to the nearest point of all has
  * lost terms to underflow. */
-static void F(points_far)(const struct F(cloud) *c, const uint8_t far[PDM_MAX_BITS],
+static void F(points_far)(struct F(cloud) *c, const uint8_t far[PDM_MAX_BITS],
                           struct F(block) *b)
 {
     const int n = c->plan->bits, count = 1 << c->low_bits;
     real slot[PDM_MAX_LEVELS][LANES], best[PDM_MAX_BITS][2][LANES], sum[PDM_MAX_BITS][2][LANES];
+    F(set_units)(1, c);
     F(points_least)(c, best);
     for (int k = 0; k < n; k++)
         EACH_LANE sum[k][0][i] = sum[k][1][i] = 0;
@@ -227,6 +236,7 @@ static void F(points_exact)(const struct pdm_plan *plan, struct F(block) *b)
     real sum[PDM_MAX_BITS][3][LANES], lost[PDM_MAX_BITS][3][LANES], best[PDM_MAX_BITS][2][LANES];
     uint8_t far[PDM_MAX_BITS];
     F(prepare_cloud)(plan, b, &c);
+    F(set_units)(LOG2_E, &c);
     const int high = plan->bits - c.low_bits;
 
     EACH_LANE least[i] = 0;
@@ -240,7 +250,7 @@ static void F(points_exact)(const struct pdm_plan *plan, struct F(block) *b)
     for (int chunk = 0; chunk < c.chunks; chunk++) {
         F(chunk_metrics)(&c, chunk, slot);
         for (int s = 0; s < 1 << c.low_bits; s++)
-            EACH_LANE slot[s][i] = F(exp_minus)(slot[s][i] - least[i]);
+            EACH_LANE slot[s][i] = F(exp2_minus)(slot[s][i] - least[i], 0);
         F(differences)(c.low_bits, slot, difference);
         F(halve_sum)(c.low_bits, slot, half);
         for (int k = 0; k < plan->bits; k++)

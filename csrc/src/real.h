@@ -14,11 +14,11 @@ typedef float real32;
 #define LARGEST 0x1.fffffep+127f
 #define SMALLEST 0x1p-126f           /* the smallest normal number */
 #define FARTHEST 0x1p+107            /* of a coordinate: times 2^18 still finite */
+#define LEAST_NOISE 0x1p-100
 #define FRACTION_BITS 23
 #define EXPONENT_ONE 127u           /* exponent field of 1 */
 #define MAGIC 0x1.8p+23f            /* x + MAGIC rounds x to a whole number, half to even */
 #define MAGIC_WORD 0x4b400000u      /* MAGIC as a word: + i is MAGIC + i */
-#define SPLIT 512                   /* x + x SPLIT - x SPLIT drops the last 9 bits of x */
 #define ZERO_WEIGHT 125             /* 2^-x counts as 0 from here: before it gets subnormal */
 #define LARGEST_RATIO R(64.)        /* |ln| of two sums up to which none of them has lost terms */
 #define NEGLIGIBLE R(32.)           /* 65536 terms of e^-32 are below 2^-29 */
@@ -33,11 +33,11 @@ typedef double real64;
 #define LARGEST 0x1.fffffffffffffp+1023
 #define SMALLEST 0x1p-1022
 #define FARTHEST 0x1p+1003
+#define LEAST_NOISE 0x1p-960
 #define FRACTION_BITS 52
 #define EXPONENT_ONE 1023u
 #define MAGIC 0x1.8p+52
 #define MAGIC_WORD 0x4338000000000000u
-#define SPLIT 512
 #define ZERO_WEIGHT 1020
 #define LARGEST_RATIO R(650.)
 #define NEGLIGIBLE R(56.)
@@ -59,11 +59,11 @@ typedef double real64;
 #undef LARGEST
 #undef SMALLEST
 #undef FARTHEST
+#undef LEAST_NOISE
 #undef FRACTION_BITS
 #undef EXPONENT_ONE
 #undef MAGIC
 #undef MAGIC_WORD
-#undef SPLIT
 #undef ZERO_WEIGHT
 #undef LARGEST_RATIO
 #undef NEGLIGIBLE

@@ -1,0 +1,3 @@
+from pydemap.cli import main
+
+main()
