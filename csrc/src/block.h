@@ -12,6 +12,8 @@ struct F(block) {
     real llr[PDM_MAX_BITS][LANES];      /* positive means 0 */
     uint32_t label[LANES];      /* slicing: the nearest point */
     int has_prior;
+    int same_noise;             /* noise and lift are the same in all lanes */
+    int lifted;                 /* any lift is not 1 */
 };
 
 /* Samples far beyond any point are held there, so that what the kernels form
@@ -21,8 +23,16 @@ static inline real F(hold)(double x)
     return (real)(x < -FARTHEST ? -FARTHEST : x > FARTHEST ? FARTHEST : x);
 }
 
-/* x / noise for x > 0; 0 where there is no information. */
-static inline real F(over_noise)(double x, double noise) { return (real)(x / noise); }
+/* x / noise in all lanes, for x > 0; 0 where there is no information. */
+static inline void F(scale)(const struct F(block) *b, double x, real scale[LANES])
+{
+    if (b->same_noise) {
+        const real one = (real)(x / b->noise[0]);
+        EACH_LANE scale[i] = one;
+    } else {
+        EACH_LANE scale[i] = (real)(x / b->noise[i]);
+    }
+}
 
 /* So small a noise variance would make metrics overflow and their differences
  * meaningless; LLRs are proportional to 1 / N0 down there. */
@@ -36,7 +46,7 @@ static inline void F(set_noise)(struct F(block) *b, int i, double noise)
 /* y / h and N0 / |h|^2, in double whatever the type: for float32 the result is
  * then rounded once, and for float64 h is brought near 1 by a power of two
  * first, so that |h|^2 neither overflows nor loses digits. */
-static inline void F(equalise)(struct F(block) *b, int i, const real *y, const real *h, double noise,
+static inline void F(equalise)(struct F(block) *b, int i, const real *y, const real *h,
                                double unit)
 {
     const double yr = (double)y[0] * 0.125, yi = (double)y[1] * 0.125;
@@ -56,73 +66,82 @@ static inline void F(equalise)(struct F(block) *b, int i, const real *y, const r
     const int usable = !silent && poison == 0;
     b->v[0][i] = usable ? F(hold)((yr * hr + yi * hi) / divisor * back) : 0;
     b->v[1][i] = usable ? F(hold)((yi * hr - yr * hi) / divisor * back) : 0;
-    F(set_noise)(b, i, usable ? noise * (unit * unit) * down / divisor * down : NO_INFORMATION);
+    F(set_noise)(b, i, usable ? b->noise[i] * (unit * unit) * down / divisor * down : NO_INFORMATION);
     b->poison[i] = poison;
 }
 
 static void F(load)(const struct pdm_call *call, size_t first, int count, struct F(block) *b)
 {
     const struct pdm_plan *plan = call->plan;
+    const double unit = plan->unit, square = unit * unit;
     const real *y = (const real *)call->y + 2 * first;
-    const real *noise = call->noise ? (const real *)call->noise + first * call->noise_stride : 0;
-    const double unit = plan->unit;
+    real padded[2 * LANES];
+    if (count < LANES) {    /* whole blocks only from here on */
+        for (int i = 0; i < 2 * LANES; i++)
+            padded[i] = i < 2 * count ? y[i] : 0;
+        y = padded;
+    }
+    b->same_noise = !call->noise_stride && !call->gain;
+    const real *noise = (const real *)call->noise;
+    if (call->noise_stride)
+        EACH_LANE b->noise[i] = (double)noise[first + (size_t)(i < count ? i : 0)];
+    else
+        EACH_LANE b->noise[i] = noise ? (double)noise[0] : 1;
 
     if (call->gain) {
         const real *gain = (const real *)call->gain + 2 * first * call->gain_stride;
-        for (int i = 0; i < count; i++)
-            F(equalise)(b, i, y + 2 * i, gain + 2 * (size_t)i * call->gain_stride,
-                        noise ? (double)noise[(size_t)i * call->noise_stride] : 1, unit);
+        EACH_LANE F(equalise)(b, i, y + 2 * i,
+                              gain + 2 * (size_t)(i < count ? i : 0) * call->gain_stride, unit);
     } else {
-        const real u = (real)unit;
-        for (int i = 0; i < count; i++) {
-            const real yr = y[2 * i], yi = y[2 * i + 1];
-            const real poison = (yr - yr) + (yi - yi);
-            b->v[0][i] = poison == 0 ? F(hold)((double)(yr * u)) : 0;
-            b->v[1][i] = poison == 0 ? F(hold)((double)(yi * u)) : 0;
+        const real u = (real)unit, most = (real)FARTHEST;
+        EACH_LANE
+        {
+            const real yr = y[2 * i], yi = y[2 * i + 1], poison = (yr - yr) + (yi - yi);
+            const real vr = yr * u, vi = yi * u;
+            b->v[0][i] = poison == 0 ? F(most)(F(least)(vr, most), -most) : 0;
+            b->v[1][i] = poison == 0 ? F(most)(F(least)(vi, most), -most) : 0;
             b->poison[i] = poison;
         }
-        const double square = unit * unit;
-        for (int i = 0; i < count; i++)
-            F(set_noise)(b, i, b->poison[i] == 0
-                                   ? (noise ? (double)noise[(size_t)i * call->noise_stride] : 1) * square
-                                   : NO_INFORMATION);
-    }
-    for (int i = count; i < LANES; i++) {
-        b->v[0][i] = b->v[1][i] = b->poison[i] = 0;
-        F(set_noise)(b, i, NO_INFORMATION);
-    }
-
-    b->has_prior = call->prior != 0;
-    if (call->prior) {
-        const int n = plan->bits;
-        const real *prior = (const real *)call->prior + (size_t)n * first;
-        const real sign = call->settings.positive_bit ? -R(1.) : R(1.);
-        for (int k = 0; k < n; k++) {
-            for (int i = 0; i < count; i++) {
-                const real p = prior[(size_t)i * (size_t)n + (size_t)k] * sign;
-                b->poison[i] = p == p ? b->poison[i] : p;
-                b->prior[k][i] = p == p ? F(most)(-PRIOR_LIMIT, F(least)(p, PRIOR_LIMIT)) : 0;
-            }
-            for (int i = count; i < LANES; i++)
-                b->prior[k][i] = 0;
+        for (int i = 0; i < (b->same_noise ? 1 : LANES); i++)
+            F(set_noise)(b, i, b->noise[i] * square);
+        if (b->same_noise) {
+            EACH_LANE b->noise[i] = b->noise[0];
+            EACH_LANE b->lift[i] = b->lift[0];
         }
     }
-    for (int k = 0; k < plan->bits; k++)
-        EACH_LANE b->prior[k][i] = call->prior ? b->prior[k][i] : 0;
+    b->lifted = 0;
+    EACH_LANE b->lifted |= b->lift[i] > 1;
+
+    b->has_prior = call->prior != 0;
+    const int n = plan->bits;
+    const real *prior = (const real *)call->prior + (size_t)n * first;
+    const real sign = call->settings.positive_bit ? -R(1.) : R(1.);
+    for (int k = 0; k < (call->prior ? n : 0); k++)
+        EACH_LANE
+        {
+            const real p = i < count ? prior[i * n + k] * sign : 0;
+            b->poison[i] = p == p ? b->poison[i] : p;
+            b->prior[k][i] = p == p ? F(most)(-PRIOR_LIMIT, F(least)(p, PRIOR_LIMIT)) : 0;
+        }
 }
 
-/* The LLR of bit k as it leaves, whatever the output type. */
-static inline real F(finish)(const struct pdm_settings *settings, const struct F(block) *b, int k,
-                             int i)
+/* From LLRs by bit, positive meaning 0, to LLRs as they leave, symbol by symbol. */
+static inline void F(finish)(const int n, const pdm_settings *settings, struct F(block) *b, real *llr)
 {
-    real l = b->llr[k][i];
-    l = F(magnitude)(l) > R(1e6) ? l * b->lift[i] : l;  /* not the ln 2 of a tie */
-    if (b->has_prior) {
-        l = b->noise[i] < NO_INFORMATION ? l : b->prior[k][i];
-        l = settings->extrinsic ? l - b->prior[k][i] : l;
+    for (int k = 0; k < n; k++) {
+        real *l = b->llr[k];
+        const real *prior = b->prior[k];
+        if (b->lifted)  /* all but the ln 2 of a tie */
+            EACH_LANE l[i] = F(magnitude)(l[i]) > R(1e6) ? l[i] * b->lift[i] : l[i];
+        if (b->has_prior) {
+            EACH_LANE l[i] = b->noise[i] < NO_INFORMATION ? l[i] : prior[i];
+            if (settings->extrinsic)
+                EACH_LANE l[i] -= prior[i];
+        }
+        const real sign = settings->positive_bit ? -R(1.) : R(1.);
+        EACH_LANE l[i] = sign * F(most)(F(least)(l[i], LARGEST), -LARGEST) + b->poison[i];
     }
-    l = F(most)(F(least)(l, LARGEST), -LARGEST);
-    return (settings->positive_bit ? -l : l) + b->poison[i];
+    EACH_LANE for (int k = 0; k < n; k++) llr[i * n + k] = b->llr[k][i];
 }
 
 /* A word: rounded half to even by adding and taking off MAGIC, once the value
@@ -133,35 +152,23 @@ static inline int F(to_counts)(real llr, real step, real limit)
     return llr == llr ? (int)((x + MAGIC) - MAGIC) : 0;
 }
 
-static void F(store)(const struct pdm_call *call, size_t first, int count, const struct F(block) *b)
+/* Write `count` LLRs (labels: symbols) from place `start` of the output on. */
+static void F(store)(const struct pdm_call *call, size_t start, int count, const real *llr)
 {
-    const size_t n = call->plan->bits, start = n * first;
-    const pdm_settings *s = &call->settings;
-    const real step = (real)s->word_step;
-    const real limit = (real)((1 << (s->word_bits - 1)) - 1);
-
-    switch (call->output) {
-    case PDM_OUT_LABEL:
-        for (int i = 0; i < count; i++)
-            ((uint16_t *)call->out)[first + (size_t)i] =
-                (uint16_t)(b->noise[i] < NO_INFORMATION ? b->label[i] : 0);
-        break;
-    case PDM_OUT_REAL:
-        for (int i = 0; i < count; i++)
-            for (size_t k = 0; k < n; k++)
-                ((real *)call->out)[start + (size_t)i * n + k] = F(finish)(s, b, (int)k, i);
-        break;
-    case PDM_OUT_I8:
-        for (int i = 0; i < count; i++)
-            for (size_t k = 0; k < n; k++)
-                ((int8_t *)call->out)[start + (size_t)i * n + k] =
-                    (int8_t)F(to_counts)(F(finish)(s, b, (int)k, i), step, limit);
-        break;
-    case PDM_OUT_I16:
-        for (int i = 0; i < count; i++)
-            for (size_t k = 0; k < n; k++)
-                ((int16_t *)call->out)[start + (size_t)i * n + k] =
-                    (int16_t)F(to_counts)(F(finish)(s, b, (int)k, i), step, limit);
-        break;
+    const real step = (real)call->settings.word_step;
+    const real limit = (real)((1 << (call->settings.word_bits - 1)) - 1);
+    if (call->output == PDM_OUT_REAL) {
+        real *out = (real *)call->out + start;
+        if (out != llr)
+            for (int p = 0; p < count; p++)
+                out[p] = llr[p];
+    } else if (call->output == PDM_OUT_I8) {
+        int8_t *out = (int8_t *)call->out + start;
+        for (int p = 0; p < count; p++)
+            out[p] = (int8_t)F(to_counts)(llr[p], step, limit);
+    } else {
+        int16_t *out = (int16_t *)call->out + start;
+        for (int p = 0; p < count; p++)
+            out[p] = (int16_t)F(to_counts)(llr[p], step, limit);
     }
 }

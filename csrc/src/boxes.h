@@ -25,7 +25,7 @@ struct F(view) {
 };
 
 /* All boxes.  Metrics are in units of 1 / per_nat: in nats for max-log; as
- * exponents of 2 for sums, so that they go into exp2_minus unrounded. */
+ * exponents of 2 for sums, so that they go into split_exp2 unrounded. */
 struct F(scene) {
     struct F(view) view[PDM_MAX_BOXES][2];
     real farther[PDM_MAX_BOXES][LANES];     /* the box's nearest point than that of all ... */
@@ -71,18 +71,20 @@ static inline void F(set_view)(const struct pdm_plan *plan, int axis, const stru
         const double way_low = ((v - (way - part)) - (l + part)) - level * a_low;
         const double e = (way + way_low) / a;
         const double e_low = ((way - e * a) - product_low(e, a) + way_low) / a;
+        /* far off, where Dekker's product overflows, it does not matter */
+        const double low = (e - (double)(real)e) + (e > -0x1p+80 && e < 0x1p+80 ? e_low : 0);
         view->e[i] = (real)e;
-
-        const double noise = b->noise[i];
-        view->scale[i] = F(over_noise)(units, noise);
-        const double scale = (double)view->scale[i];
-        const double scale_low = ((units - scale * noise) - product_low(scale, noise) + units_low) / noise;
-
-        /* At extremes, where Dekker's product overflows, it does not matter. */
-        const int moderate = e > -0x1p+80 && e < 0x1p+80 && scale > 0x1p-80 && scale < 0x1p+80;
-        view->scale_low[i] = moderate ? (real)scale_low : 0;
-        view->scaled_e_low[i] = moderate ? (real)(scale * ((e - (double)(real)e) + e_low)) : 0;
+        view->scaled_e_low[i] = (real)low;
     }
+    F(scale)(b, units, view->scale);
+    for (int i = 0; i < (b->same_noise ? 1 : LANES); i++) {
+        const double noise = b->noise[i], scale = (double)view->scale[i];
+        const double rest = (units - scale * noise) - product_low(scale, noise) + units_low;
+        view->scale_low[i] = noise > 0x1p-80 && noise < 0x1p+80 ? (real)(rest / noise) : 0;
+    }
+    if (b->same_noise)
+        EACH_LANE view->scale_low[i] = view->scale_low[0];
+    EACH_LANE view->scaled_e_low[i] *= view->scale[i];
 }
 
 /* Where the sample is on the axis, in spacings from level 0, held to the grid;
@@ -216,32 +218,36 @@ static inline int F(slot_metrics)(const struct pdm_plan *plan, int x, int axis,
     return slots;
 }
 
-/* Weights 2^-metric by slot, relative to near[]. */
+/* Weights by slot, relative to the metric near[]: power 2^-n. */
 static inline void F(slot_weights)(const struct pdm_plan *plan, int x, int axis,
-                                  const struct F(block) *b, const struct F(scene) *scene,
-                                  const real near[LANES], real slot[PDM_MAX_LEVELS][LANES])
+                                   const struct F(block) *b, const struct F(scene) *scene,
+                                   const real near[LANES], real power[][LANES], real n[][LANES])
 {
     const struct pdm_box *box = &plan->box[x];
     const struct pdm_level *level = pdm_levels(plan, box, axis);
     const struct F(view) *view = &scene->view[x][axis];
     const int slots = 1 << box->axis[axis].patterns, count = box->axis[axis].count;
     if (b->has_prior) {
-        F(slot_metrics)(plan, x, axis, b, scene, slot);
+        F(slot_metrics)(plan, x, axis, b, scene, n);
         for (int s = 0; s < slots; s++)
-            EACH_LANE slot[s][i] = F(exp2_minus)(slot[s][i] - near[i], 0);
+            EACH_LANE power[s][i] = F(split_exp2)(n[s][i] - near[i], 0, &n[s][i]);
         return;
     }
     if (count < slots)
         for (int s = 0; s < slots; s++)
-            EACH_LANE slot[s][i] = 0;
+            EACH_LANE
+            {
+                power[s][i] = 0;
+                n[s][i] = LARGEST;
+            }
     for (int j = 0; j < count; j++) {
         const real number = (real)level[j].number;
-        real *weight = slot[level[j].slot];
+        const unsigned s = level[j].slot;
         EACH_LANE
         {
             const real distance = F(level_distance)(view, i, number);
-            weight[i] = F(exp2_minus)(view->scale[i] * distance,
-                                      F(level_low)(view, i, number, distance));
+            power[s][i] = F(split_exp2)(view->scale[i] * distance,
+                                        F(level_low)(view, i, number, distance), &n[s][i]);
         }
     }
 }
@@ -349,65 +355,59 @@ static void F(boxes_max_log)(const struct pdm_plan *plan, struct F(block) *b)
         EACH_LANE b->llr[k][i] = best[k][1][i] - best[k][0][i];
 }
 
-/* ln of the sum of the weights of all points with bit k = value, as -least +
- * ln(sum), the sum relative to the nearest such point: no weight that matters
- * underflows, however far the points are.  Terms that cannot change the
- * rounded result count as 0, which lets whole levels be skipped. */
-static void F(boxes_bit)(const struct pdm_plan *plan, const struct F(block) *b,
-                         const struct F(scene) *scene, int k, int value, real least[LANES],
-                         real sum[LANES])
+/* All that the sums of a bit are made of. */
+struct F(parts) {
+    real slot_power[PDM_MAX_SLOTS][LANES], slot_n[PDM_MAX_SLOTS][LANES];
+    real all[PDM_MAX_BOXES][2][LANES];                  /* sum of an axis */
+    real power[PDM_MAX_BOXES][LANES], n[PDM_MAX_BOXES][LANES];  /* weight of a box */
+};
+
+/* Sum over all points with bit k = value, as sum 2^-n with n that of the
+ * heaviest of them: none that matters underflows, however far they are. */
+static void F(far_sum)(const struct pdm_plan *plan, const struct F(parts) *parts, int k, int value,
+                       real sum[LANES], real n[LANES])
 {
-    real near[PDM_MAX_BOXES][3][LANES], slot[PDM_MAX_LEVELS][LANES];
-    EACH_LANE least[i] = LARGEST;
+    EACH_LANE n[i] = LARGEST;
     EACH_LANE sum[i] = 0;
     for (int pass = 0; pass < 2; pass++)
         for (int x = 0; x < plan->boxes; x++) {
-            const struct pdm_box *box = &plan->box[x];
-            const struct pdm_bit bit = box->bit[k];
-            real axis_sum[2][LANES];
-            if (bit.axis == 2 && bit.invert != value)
+            const struct pdm_bit bit = plan->box[x].bit[k];
+            const real *n_box = parts->n[x], *power = parts->power[x];
+            if (bit.axis == 2) {
+                const real *all = parts->all[x][0], *other = parts->all[x][1];
+                if (bit.invert == value && pass == 0)
+                    EACH_LANE n[i] = F(least)(n[i], n_box[i]);
+                else if (bit.invert == value)
+                    EACH_LANE sum[i] += power[i] * (all[i] * other[i]) * F(half_to_the)(n_box[i] - n[i]);
                 continue;
-            for (int axis = 0; axis < 2; axis++) {
-                const int slots = F(slot_metrics)(plan, x, axis, b, scene, slot);
-                const int shift = box->axis[axis].patterns - 1 - bit.pattern;
+            }
+            const int first = plan->box[x].axis[bit.axis].first_slot;
+            const real *other = parts->all[x][1 - bit.axis];
+            const int patterns = plan->box[x].axis[bit.axis].patterns;
+            const int shift = patterns - 1 - bit.pattern;
+            real axis_sum[LANES];
+            EACH_LANE axis_sum[i] = 0;
+            for (int s = 0; s < 1 << patterns; s++) {
+                const real *slot_n = parts->slot_n[first + s], *slot_power = parts->slot_power[first + s];
+                if (((s >> shift & 1) ^ bit.invert) != value)
+                    continue;
                 if (pass == 0)
-                    EACH_LANE near[x][axis][i] = LARGEST;
+                    EACH_LANE n[i] = F(least)(n[i], slot_n[i] + n_box[i]);
                 else
-                    EACH_LANE axis_sum[axis][i] = 0;
-                for (int s = 0; s < slots; s++) {
-                    if (bit.axis == axis && ((s >> shift & 1) ^ bit.invert) != value)
-                        continue;
-                    if (pass == 0) {
-                        EACH_LANE near[x][axis][i] = F(least)(near[x][axis][i], slot[s][i]);
-                        continue;
-                    }
-                    real way[LANES];
-                    int any = 0;
-                    EACH_LANE way[i] = slot[s][i] - near[x][axis][i];
-                    EACH_LANE any |= way[i] < NEGLIGIBLE;
-                    if (any)
-                        EACH_LANE axis_sum[axis][i] +=
-                            way[i] < NEGLIGIBLE ? F(exp_minus)(way[i]) : 0;
-                }
+                    EACH_LANE axis_sum[i] += slot_power[i] * F(half_to_the)(slot_n[i] + n_box[i] - n[i]);
             }
-            if (pass == 0) {
-                F(box_cost)(plan, x, b, scene, near[x][2]);
-                EACH_LANE near[x][2][i] += near[x][0][i] + near[x][1][i];
-                EACH_LANE least[i] = F(least)(least[i], near[x][2][i]);
-            } else {
-                EACH_LANE sum[i] += F(exp_minus)(near[x][2][i] - least[i]) *
-                                    (axis_sum[0][i] * axis_sum[1][i]);
-            }
+            if (pass == 1)
+                EACH_LANE sum[i] += axis_sum[i] * (power[i] * other[i]);
         }
 }
 
 static void F(boxes_exact)(const struct pdm_plan *plan, struct F(block) *b)
 {
     struct F(scene) scene;
-    real slot[PDM_MAX_LEVELS][LANES];
+    struct F(parts) parts;
+    real slot[PDM_MAX_LEVELS][LANES], near[PDM_MAX_BOXES][3][LANES], least[LANES];
     real half[2][PDM_MAX_PATTERNS][2][LANES], difference[2][PDM_MAX_PATTERNS][LANES];
-    real all[3][LANES], total[PDM_MAX_BITS][3][LANES];
-    real near[PDM_MAX_BOXES][3][LANES], least[LANES];
+    real total[PDM_MAX_BITS][3][LANES];
     F(view_boxes)(plan, b, LOG2_E, &scene);
 
     /* The least metric of each axis of each box, and of all points: 0 but for
@@ -433,62 +433,71 @@ static void F(boxes_exact)(const struct pdm_plan *plan, struct F(block) *b)
     for (int x = 0; x < plan->boxes; x++) {
         const struct pdm_box *box = &plan->box[x];
         for (int axis = 0; axis < 2; axis++) {
-            F(slot_weights)(plan, x, axis, b, &scene, near[x][axis], slot);
-            F(differences)(box->axis[axis].patterns, slot, difference[axis]);
-            F(halve_sum)(box->axis[axis].patterns, slot, half[axis]);
-            EACH_LANE all[axis][i] = slot[0][i];
+            const int patterns = box->axis[axis].patterns, first = box->axis[axis].first_slot;
+            real(*power)[LANES] = parts.slot_power + first, (*n)[LANES] = parts.slot_n + first;
+            F(slot_weights)(plan, x, axis, b, &scene, near[x][axis], power, n);
+            for (int s = 0; s < 1 << patterns; s++)
+                EACH_LANE slot[s][i] = power[s][i] * F(half_to_the)(n[s][i]);
+            F(differences)(patterns, slot, difference[axis]);
+            F(halve_sum)(patterns, slot, half[axis]);
+            EACH_LANE parts.all[x][axis][i] = slot[0][i];
         }
+        real share[3][LANES];   /* what a sum over one axis is multiplied with; both */
         if (plan->boxes == 1) {
             /* the other axis and the box's own weight cancel in the ratio */
-            EACH_LANE all[0][i] = all[1][i] = 1;
+            for (int axis = 0; axis < 2; axis++)
+                EACH_LANE parts.all[x][axis][i] = share[axis][i] = 1;
+            EACH_LANE parts.power[x][i] = 1;
+            EACH_LANE parts.n[x][i] = 0;
         } else {
             EACH_LANE
             {
-                const real weight = F(exp2_minus)(near[x][2][i] - least[i], scene.farther_low[x][i]);
-                all[0][i] *= weight;
-                all[2][i] = all[0][i] * all[1][i];
-                all[1][i] *= weight;
+                parts.power[x][i] = F(split_exp2)(near[x][2][i] - least[i], scene.farther_low[x][i],
+                                                  &parts.n[x][i]);
+                const real weight = parts.power[x][i] * F(half_to_the)(parts.n[x][i]);
+                share[0][i] = parts.all[x][1][i] * weight;
+                share[1][i] = parts.all[x][0][i] * weight;
+                share[2][i] = parts.all[x][0][i] * share[0][i];
             }
         }
         for (int k = 0; k < plan->bits; k++) {
             const struct pdm_bit bit = box->bit[k];
+            const real *with = share[bit.axis];
             if (bit.axis == 2) {
                 real *t = total[k][bit.invert];
-                EACH_LANE t[i] += all[2][i];
-                EACH_LANE total[k][2][i] += bit.invert ? -all[2][i] : all[2][i];
+                EACH_LANE t[i] += with[i];
+                EACH_LANE total[k][2][i] += bit.invert ? -with[i] : with[i];
             } else {
                 const real *zero = half[bit.axis][bit.pattern][bit.invert];
                 const real *one = half[bit.axis][bit.pattern][1 - bit.invert];
                 const real *d = difference[bit.axis][bit.pattern];
-                const real *other = all[1 - bit.axis];
-                EACH_LANE total[k][0][i] += zero[i] * other[i];
-                EACH_LANE total[k][1][i] += one[i] * other[i];
-                EACH_LANE total[k][2][i] += (bit.invert ? -d[i] : d[i]) * other[i];
+                EACH_LANE total[k][0][i] += zero[i] * with[i];
+                EACH_LANE total[k][1][i] += one[i] * with[i];
+                EACH_LANE total[k][2][i] += (bit.invert ? -d[i] : d[i]) * with[i];
             }
         }
     }
 
     for (int k = 0; k < plan->bits; k++) {
         int far = 0;
+        real *llr = b->llr[k];
         EACH_LANE
         {
             /* a sum that underflowed to 0 must not reach the logarithm */
             const real zero = F(most)(total[k][0][i], SMALLEST), one = F(most)(total[k][1][i], SMALLEST);
-            b->llr[k][i] = F(log_ratio)(zero, one, total[k][2][i]);
-            far |= F(magnitude)(b->llr[k][i]) > LARGEST_RATIO;
+            llr[i] = F(log_ratio)(zero, one, total[k][2][i]);
         }
+        EACH_LANE far |= F(magnitude)(llr[i]) > LARGEST_RATIO;
         if (!far)
             continue;
-        if (scene.per_nat != 1)
-            F(view_boxes)(plan, b, 1, &scene);
-        real metric_of[2][LANES], sum[2][LANES];
+        real sum[2][LANES], n[2][LANES];
         for (int value = 0; value < 2; value++)
-            F(boxes_bit)(plan, b, &scene, k, value, metric_of[value], sum[value]);
+            F(far_sum)(plan, &parts, k, value, sum[value], n[value]);
         EACH_LANE
         {
-            const real l = (metric_of[1][i] - metric_of[0][i]) +
-                           F(log_ratio)(sum[0][i], sum[1][i], sum[0][i] - sum[1][i]);
-            b->llr[k][i] = F(magnitude)(b->llr[k][i]) > LARGEST_RATIO ? l : b->llr[k][i];
+            const real l = F(log_ratio)(sum[0][i], sum[1][i], sum[0][i] - sum[1][i]);
+            const real whole = F(add_ln2)(n[1][i] - n[0][i], l);
+            llr[i] = F(magnitude)(llr[i]) > LARGEST_RATIO ? whole : llr[i];
         }
     }
 }

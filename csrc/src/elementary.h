@@ -26,10 +26,18 @@ static inline real F(least)(real a, real b) { return a < b ? a : b; }
 
 static inline real F(most)(real a, real b) { return a > b ? a : b; }
 
-/* 2^-(x + low) for x >= -1 and low a rounding error of x: relative error below
- * 1.3 u; 0 where the result would come near the subnormal numbers.  x is split
- * at the nearest whole number; the power of its fraction is a polynomial. */
-static inline real F(exp2_minus)(real x, real low)
+/* 2^-n for a whole number n >= 0, and 0 where it would be subnormal. */
+static inline real F(half_to_the)(real n)
+{
+    const real held = F(least)(n, (real)ZERO_WEIGHT);
+    const word scale = MAGIC_WORD + EXPONENT_ONE - F(to_word)(held + MAGIC);
+    return held < (real)ZERO_WEIGHT ? F(from_word)(scale << FRACTION_BITS) : 0;
+}
+
+/* 2^-(x + low) = power 2^-n, for x >= -1 and low a rounding error of x: n is
+ * the nearest whole number (x itself where it has no fraction digits any more),
+ * power in [0.7, 1.42], relative error below 1.3 u, a polynomial. */
+static inline real F(split_exp2)(real x, real low, real *n)
 {
 #if REAL_BITS == 32
     const real c0 = 0.6931471825f, c1 = 0.2402265072f, c2 = 0.05550356954f, c3 = 0.009618083015f,
@@ -41,21 +49,27 @@ static inline real F(exp2_minus)(real x, real low)
                c7 = 1.32154425879216893e-6, c8 = 1.01780624458457737e-7,
                c9 = 7.07258594926922339e-9, c10 = 4.45496059818651856e-10;
 #endif
-    const real held = F(least)(x, (real)ZERO_WEIGHT);
-    const real shifted = held + MAGIC, f = ((shifted - MAGIC) - held) - low;
+    const real whole = (real)((word)1 << (FRACTION_BITS - 1));
+    const real held = x < whole ? x : 0;
+    const real nearest = (held + MAGIC) - MAGIC;
+    const real f = (nearest - held) - (x < whole ? low : 0);
 #if REAL_BITS == 32
     const real p = c0 + f * (c1 + f * (c2 + f * (c3 + f * (c4 + f * c5))));
 #else
     const real high = c6 + f * (c7 + f * (c8 + f * (c9 + f * c10)));
     const real p = c0 + f * (c1 + f * (c2 + f * (c3 + f * (c4 + f * (c5 + f * high)))));
 #endif
-    const real scale =
-        F(from_word)((MAGIC_WORD + EXPONENT_ONE - F(to_word)(shifted)) << FRACTION_BITS);
-    return held < (real)ZERO_WEIGHT ? scale + scale * (f * p) : 0;
+    *n = x < whole ? nearest : x;
+    return 1 + f * p;
 }
 
-/* exp(-t): the product rounds, which costs t u more. */
-static inline real F(exp_minus)(real t) { return F(exp2_minus)(t * (real)LOG2_E, 0); }
+/* exp(-t), t >= -1: the product rounds, which costs t u more. */
+static inline real F(exp_minus)(real t)
+{
+    real n;
+    const real power = F(split_exp2)(t * (real)LOG2_E, 0, &n);
+    return power * F(half_to_the)(n);
+}
 
 /* ln(a / b) for normal a, b > 0, given their difference d = a - b: absolute
  * error below 2 u (1 + |result|) beyond what a, b and d bring along.  The
@@ -94,4 +108,15 @@ static inline real F(log_ratio)(real a, real b, real d)
     const real p = c0 + w * (c1 + w * (c2 + w * (c3 + w * (c4 + w * (c5 + w * c6)))));
 #endif
     return e * ln2_high + (e * ln2_low + (z + z) + z * (w * p));
+}
+
+/* n ln 2 + l for a whole number n: n may be large, and its multiple of ln 2
+ * must not be rounded before the sum. */
+static inline real F(add_ln2)(real n, real l)
+{
+#if REAL_BITS == 32
+    return (real)((double)n * 0.693147180559945309 + (double)l);
+#else
+    return n * 0.693147180560117704 + (n * -1.72394445256148348e-13 + l);
+#endif
 }

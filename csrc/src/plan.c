@@ -317,7 +317,7 @@ static int number_axis(const struct grid *g, struct pdm_plan *plan, struct pdm_b
 static int write_boxes(const struct grid *g, size_t dir, const struct split *s,
                        struct pdm_plan *plan)
 {
-    size_t cost = 0;
+    size_t cost = 0, slots = 0;
     plan->boxes = (uint8_t)s->boxes;
     for (int b = 0; b < s->boxes; b++) {
         size_t level[2][PDM_MAX_LEVELS], count[2] = {0, 0};
@@ -332,11 +332,13 @@ static int write_boxes(const struct grid *g, size_t dir, const struct split *s,
             if (!number_axis(g, plan, &plan->box[b], (int)axis, level[axis], count[axis],
                              level[1 - axis][0], mask))
                 return 0;
+            plan->box[b].axis[axis].first_slot = (uint16_t)slots;
+            slots += (size_t)1 << plan->box[b].axis[axis].patterns;
             if (count[axis] > 1)
                 cost += (size_t)1 << plan->box[b].axis[axis].patterns;
         }
     }
-    return cost <= plan->order;
+    return cost <= plan->order && slots <= PDM_MAX_SLOTS;
 }
 
 static int find_boxes(struct pdm_plan *plan, const struct grid *g)

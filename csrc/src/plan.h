@@ -12,7 +12,8 @@ enum {
     PDM_MAX_BITS = 16,
     PDM_MAX_LEVELS = 256,   /* coordinates of an axis */
     PDM_MAX_PATTERNS = 8,   /* independent bits of an axis: 2^8 slots */
-    PDM_MAX_BOXES = 4
+    PDM_MAX_BOXES = 4,
+    PDM_MAX_SLOTS = 640     /* of all axes of all boxes */
 };
 
 /* Where a label bit is read in a box. */
@@ -32,6 +33,7 @@ struct pdm_box {
     struct {
         uint32_t offset;    /* of its struct pdm_level array, bytes into the plan */
         uint16_t count;     /* levels; at most 2^patterns */
+        uint16_t first_slot;    /* where its slots begin among those of all boxes */
         uint8_t patterns;
     } axis[2];
     struct pdm_bit bit[PDM_MAX_BITS];

@@ -250,7 +250,12 @@ static void F(points_exact)(const struct pdm_plan *plan, struct F(block) *b)
     for (int chunk = 0; chunk < c.chunks; chunk++) {
         F(chunk_metrics)(&c, chunk, slot);
         for (int s = 0; s < 1 << c.low_bits; s++)
-            EACH_LANE slot[s][i] = F(exp2_minus)(slot[s][i] - least[i], 0);
+            EACH_LANE
+            {
+                real n;
+                const real power = F(split_exp2)(slot[s][i] - least[i], 0, &n);
+                slot[s][i] = power * F(half_to_the)(n);
+            }
         F(differences)(c.low_bits, slot, difference);
         F(halve_sum)(c.low_bits, slot, half);
         for (int k = 0; k < plan->bits; k++)

@@ -48,8 +48,6 @@ int main(void)
         printf("N0 %lu: %s\n", (unsigned long)where, pdm_status_text(status));
         return 1;
     }
-    printf("plan: %lu of %lu bytes\n", (unsigned long)pdm_plan_used(plan),
-           (unsigned long)sizeof plan_memory);
     for (int s = 0; s < SYMBOLS; s++) {
         printf("symbol %d:", s);
         for (int k = 0; k < BITS; k++)
