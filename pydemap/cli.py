@@ -127,7 +127,7 @@ def llr(
         demapper = SoftDemapper(constellation, rule=rule, output=output, positive_bit=positive_bit)
     with ExitStack() as files:
         samples = files.enter_context(recording.open_samples(source, input_type))
-        gain = files.enter_context(recording.open_samples(gain_file)) if gain_file else None
+        gain = files.enter_context(recording.open_gain(gain_file)) if gain_file else None
         noise: float | recording.Stream
         if n0_file:
             origin = "a file, one a symbol"
@@ -139,8 +139,7 @@ def llr(
             origin = "given"
             noise = n0
         else:
-            origin = f"estimated from the first {recording.BLOCK_SYMBOLS} symbols, or all of fewer"
-            noise = recording.estimate_from_start(samples, constellation, gain=gain)
+            noise, origin = recording.estimate_from_start(samples, constellation, gain=gain)
             click.echo(f"estimated N0 = {noise!r}")
         statement = recording.demap_recording(
             demapper,
@@ -228,14 +227,16 @@ def _commands() -> click.Group:
         option(
             ["--estimate-n0"],
             is_flag=True,
-            help=f"Or a blind estimate from the first {recording.BLOCK_SYMBOLS} symbols.",
+            help=f"Or a blind estimate from the first {recording.BLOCK_SYMBOLS} symbols, "
+            "of which max(1024, 2^22 / M) are evenly picked, or all of fewer.",
         ),
     ]
     numbers = [
         option(
             ["--gain-file"],
             metavar="FILE",
-            help="Gain of each symbol; as IN, raw as .cf32_le and so on.",
+            help="Gain of each symbol: as IN, raw as .cf32_le and so on; or real: .npy, "
+            ".csv (one number a line), raw .f32 or .f64.",
         ),
         option(
             ["--rule"], type=click.Choice(["exact", "max-log", "linear"]), default="exact", show_default=True
@@ -321,9 +322,14 @@ def _output(context: click.Context, parameter: click.Parameter, value: str) -> s
         return value
     bits, _, step = value.partition(":")
     try:
-        return Word(int(bits), float(step))
+        word = int(bits), float(step)
+    except ValueError:
+        expected = "float32, float64 or words of BITS:STEP such as 6:0.5"
+        raise click.BadParameter(f"{value!r}: expected {expected}") from None
+    try:
+        return Word(*word)
     except ValueError as problem:
-        raise click.BadParameter(f"{value}: expected float32, float64 or BITS:STEP ({problem})") from problem
+        raise click.BadParameter(f"{value!r}: {problem}") from problem
 
 
 def _print_facts(facts: dict[str, str]) -> None:

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 import os
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
@@ -37,7 +36,7 @@ class Word:
     bits : int
         2 to 16. Words of up to 8 bits come as int8, wider ones as int16.
     step : float
-        LLR per count, finite and > 0.
+        LLR per count, from 2**-126 to 2**127.
 
     Raises
     ------
@@ -53,10 +52,10 @@ class Word:
             raise TypeError(f"bits must be an integer from 2 to 16, got {self.bits!r}")
         if not 2 <= self.bits <= 16:
             raise ValueError(f"bits must be from 2 to 16, got {self.bits}")
-        if isinstance(self.step, bool) or not isinstance(self.step, int | float | np.number):
+        if isinstance(self.step, bool) or not isinstance(self.step, int | float | np.integer | np.floating):
             raise TypeError(f"step must be a number > 0 (LLR per count), got {self.step!r}")
         if not 2.0**-126 <= self.step <= 2.0**127:
-            raise ValueError(f"step must be finite, > 0 and a normal float32 (LLR per count), got {self.step!r}")
+            raise ValueError(f"step must be a normal float32 > 0 (LLR per count), got {self.step!r}")
         object.__setattr__(self, "bits", int(self.bits))
         object.__setattr__(self, "step", float(self.step))
 
@@ -123,7 +122,7 @@ class SoftDemapper:
     >>> import numpy as np, pydemap
     >>> demap = pydemap.SoftDemapper(pydemap.square_qam(16), rule="max-log")
     >>> demap(np.array([0.3 + 0.9j]), 0.1).round(3)
-    array([[-3.795, -5.298, ...]], dtype=float32)
+    array([[ -3.795,  -4.205, -14.768,   3.384]], dtype=float32)
     """
 
     __slots__ = (
@@ -153,11 +152,12 @@ class SoftDemapper:
         output: Literal["float32", "float64"] | Word = "float32",
         positive_bit: int = 0,
     ) -> None:
-        if not isinstance(constellation, Constellation):
-            raise TypeError(f"constellation must be a pydemap.Constellation, got {type(constellation).__name__}")
-        if rule not in _RULES:
+        _check_constellation(constellation)
+        if not isinstance(rule, str) or rule not in _RULES:
             raise ValueError(f"rule must be one of {', '.join(map(repr, _RULES))}, got {rule!r}")
-        if not isinstance(output, Word) and output not in ("float32", "float64"):
+        if not isinstance(output, Word) and not (
+            isinstance(output, str) and output in ("float32", "float64")
+        ):
             raise ValueError(f"output must be 'float32', 'float64' or a pydemap.Word, got {output!r}")
         if positive_bit not in (0, 1):
             raise ValueError(f"positive_bit must be 0 or 1, got {positive_bit!r}")
@@ -210,7 +210,9 @@ class SoftDemapper:
 
     def _make_settings(self, extrinsic: int) -> Any:
         word = self.output if isinstance(self.output, Word) else Word(2, 1.0)
-        return ffi.new("pdm_settings *", (_RULES[self.rule], extrinsic, self.positive_bit, word.bits, word.step))
+        return ffi.new(
+            "pdm_settings *", (_RULES[self.rule], extrinsic, self.positive_bit, word.bits, word.step)
+        )
 
     def _key(self) -> tuple[Any, ...]:
         return (self.constellation, self.rule, self.output, self.positive_bit)
@@ -285,25 +287,28 @@ class SoftDemapper:
         result_shape = (*shape, self.constellation.bits_per_symbol)
         count = samples.size
 
-        noise = np.asarray(n0)
+        noise_given = noise = _plain("n0", n0)
         if noise.dtype.kind not in "fiu":
             raise TypeError(f"n0 must be real numbers > 0, got dtype {noise.dtype}")
-        if noise.size != 1:
-            noise = _spread("n0", noise, shape)
+        noise = _spread("n0", noise, shape)
         noise_real = _as_positive_real(noise, real)
+        if count == 0 and not (np.isfinite(noise_given) & (noise_given > 0)).all():
+            raise _bad_noise(n0)
         h = None if gain is None else self._gains(gain, shape)
         known = None
         if prior is not None:
-            known = np.asarray(prior)
+            known = _plain("prior", prior)
             if known.dtype.kind not in "fiu":
                 raise TypeError(f"prior must be real numbers (LLRs), got dtype {known.dtype}")
             with np.errstate(over="ignore"):
-                known = _ready(_spread("prior", known, result_shape), real)
+                known = _ready(np.broadcast_to(_spread("prior", known, result_shape), result_shape), real)
         if out is None:
             result = np.empty(result_shape, self.dtype)
         else:
             self._check_out(out, result_shape, y=y, n0=n0, gain=gain, prior=prior)
             result = out
+        if not isinstance(extrinsic, bool | np.bool_):
+            raise TypeError(f"extrinsic must be True or False, got {extrinsic!r}")
         if isinstance(threads, bool) or not isinstance(threads, int | np.integer) or threads < 1:
             raise ValueError(f"threads must be an integer >= 1, got {threads!r}")
 
@@ -321,11 +326,17 @@ class SoftDemapper:
             n = result_shape[-1]
             return int(
                 self._call(
-                    self._plan, settings, last - first, y_p + 2 * first,
-                    noise_p + (first if noise_real.size > 1 else 0), 1 if noise_real.size == 1 else last - first,
+                    self._plan,
+                    settings,
+                    last - first,
+                    y_p + 2 * first,
+                    noise_p + (first if noise_real.size > 1 else 0),
+                    1 if noise_real.size == 1 else last - first,
                     gain_p + (2 * first if gains > 1 else 0) if gains else gain_p,
                     1 if gains == 1 else last - first,
-                    prior_p if known is None else prior_p + n * first, out_p + n * first, where,
+                    prior_p if known is None else prior_p + n * first,
+                    out_p + n * first,
+                    where,
                 )  # fmt: skip
             )
 
@@ -382,16 +393,16 @@ class SoftDemapper:
         return result
 
     def _samples(self, y: npt.ArrayLike) -> npt.NDArray[Any]:
-        samples = np.asarray(y)
+        samples = _plain("y", y)
         if samples.dtype.kind != "c" or samples.dtype.itemsize > 16:
             raise TypeError(f"y must be complex64 or complex128, got dtype {samples.dtype}")
         return _as_complex(samples, self._real)
 
     def _gains(self, gain: npt.ArrayLike, shape: tuple[int, ...]) -> npt.NDArray[Any]:
-        h = np.asarray(gain)
+        h = _plain("gain", gain)
         if h.dtype.kind not in "cfiu":
             raise TypeError(f"gain must be real or complex numbers, got dtype {h.dtype}")
-        return _as_complex(h if h.size == 1 else _spread("gain", h, shape), self._real)
+        return _as_complex(_spread("gain", h, shape), self._real)
 
     def _check_out(self, out: npt.NDArray[Any], shape: tuple[int, ...], **inputs: Any) -> None:
         if not isinstance(out, np.ndarray):
@@ -417,12 +428,26 @@ def _rebuild(constellation: Constellation, rule: Rule, output: Any, positive_bit
     return SoftDemapper(constellation, rule=rule, output=output, positive_bit=positive_bit)
 
 
+def _check_constellation(constellation: object) -> None:
+    if not isinstance(constellation, Constellation):
+        raise TypeError(f"constellation must be a pydemap.Constellation, got {type(constellation).__name__}")
+
+
 def _text(status: int) -> str:
     return str(ffi.string(lib.pdm_status_text(status)).decode())
 
 
+def _plain(name: str, value: npt.ArrayLike) -> npt.NDArray[Any]:
+    """`value` as an array; a mask would be lost in silence."""
+    if isinstance(value, np.ma.MaskedArray):
+        raise TypeError(f"{name} must not be a masked array; fill it first")
+    return np.asarray(value)
+
+
 def _spread(name: str, array: npt.NDArray[Any], shape: tuple[int, ...]) -> npt.NDArray[Any]:
-    """`array` broadcast to `shape`, or an error that names the argument."""
+    """`array` broadcast to `shape`, or as it is if one value serves for all; an error names the argument."""
+    if array.size == 1 and array.ndim <= len(shape):
+        return array
     try:
         return np.broadcast_to(array, shape)
     except ValueError:
@@ -510,7 +535,8 @@ def soft_symbols(
     equalization using a priori information", IEEE Trans. Signal Processing
     50(3), March 2002 (from memory).
     """
-    values = np.asarray(llr)
+    _check_constellation(constellation)
+    values = _plain("llr", llr)
     n = constellation.bits_per_symbol
     if values.dtype.kind not in "fiu":
         raise TypeError(f"llr must be real numbers, got dtype {values.dtype}")
@@ -571,8 +597,8 @@ def estimate_noise_variance(
     Raises
     ------
     TypeError, ValueError
-        If `y` is not complex, is empty, holds no finite sample, or shapes do
-        not broadcast.
+        If `y` is not complex, is empty, holds no finite sample or has no power,
+        or shapes do not broadcast.
 
     Notes
     -----
@@ -581,34 +607,39 @@ def estimate_noise_variance(
     Expectation maximisation: A. P. Dempster, N. M. Laird, D. B. Rubin, J. Royal
     Statistical Society B 39(1), 1977 (from memory).
     """
-    samples = np.asarray(y)
+    _check_constellation(constellation)
+    samples = _plain("y", y)
     if samples.dtype.kind != "c":
         raise TypeError(f"y must be complex, got dtype {samples.dtype}")
     h = np.asarray(1.0 if gain is None else gain)
     if h.dtype.kind not in "cfiu":
         raise TypeError(f"gain must be real or complex numbers, got dtype {h.dtype}")
-    h = _spread("gain", h, samples.shape)
-    good = np.isfinite(samples) & np.isfinite(h)
+    h = np.broadcast_to(_spread("gain", h, samples.shape), samples.shape)
+    sent = np.asarray(0.0 if known is None else known)
+    if sent.dtype.kind not in "cfiu":
+        raise TypeError(f"known must be complex symbols, got dtype {sent.dtype}")
+    sent = np.broadcast_to(_spread("known", sent, samples.shape), samples.shape)
+    limit = max(1024, 2**22 // constellation.order) if max_samples is None else max_samples
+    if isinstance(limit, bool) or not isinstance(limit, int | np.integer) or limit < 1:
+        raise ValueError(f"max_samples must be an integer >= 1, got {max_samples!r}")
+    good = np.isfinite(samples) & np.isfinite(h) & np.isfinite(sent)
     if not good.any():
-        raise ValueError("y must hold at least one finite sample")
+        raise ValueError("y must hold at least one finite sample (with finite gain and known symbol)")
     if known is not None:
-        sent = np.asarray(known)
-        if sent.dtype.kind not in "cfiu":
-            raise TypeError(f"known must be complex symbols, got dtype {sent.dtype}")
-        sent = _spread("known", sent, samples.shape)
         return float(np.mean(np.abs(samples[good] - h[good] * sent[good]) ** 2))
 
-    limit = max(1024, 2**22 // constellation.order) if max_samples is None else max_samples
-    if limit < 1:
-        raise ValueError(f"max_samples must be >= 1, got {max_samples!r}")
     received, h = samples[good].astype(np.complex128), h[good]
     pick = np.unique(np.linspace(0, len(received) - 1, min(limit, len(received))).astype(np.intp))
     received, h = received[pick], h[pick]
     rows = max(1, 2**20 // constellation.order)
     # The mean distance to all points is far too large, the one to the nearest
     # point too small; from above, expectation maximisation walks down safely.
-    power = float(np.mean(np.abs(received) ** 2))
-    noise = max(power - constellation.mean_energy * float(np.mean(np.abs(h) ** 2)), power * 1e-3)
+    with np.errstate(over="ignore", under="ignore"):
+        power, gain_power = (float(np.mean(np.abs(x) ** 2)) for x in (received, h))
+    for name, value in (("y", power), ("gain", gain_power)):
+        if not 1e-120 < value < 1e120:
+            raise ValueError(f"{name} must have a mean power between 1e-120 and 1e120, got {value!r}")
+    noise = max(power - constellation.mean_energy * gain_power, power * 1e-3)
     for _ in range(500):
         total = 0.0
         for first in range(0, len(received), rows):
@@ -650,7 +681,7 @@ def use_isa(name: str) -> None:
     ValueError
         If this machine or build has no such level.
     """
-    if not isinstance(name, str) or lib.pdm_use_isa(name.encode()):
+    if not isinstance(name, str) or "\0" in name or lib.pdm_use_isa(name.encode()):
         levels = ", ".join(map(repr, ["auto", *available_isas()]))
         raise ValueError(f"instruction-set level must be one of {levels} here, got {name!r}")
 

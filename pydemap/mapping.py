@@ -48,12 +48,15 @@ def published_mapping(document: str, order: int) -> Constellation:
     Raises
     ------
     TypeError
-        If order is not an integer.
+        If the document is not a string or order is not an integer.
     ValueError
         If the document is not known, or has no constellation of that order.
     """
+    known = ", ".join(map(repr, _MAPPINGS))
+    if not isinstance(document, str):
+        raise TypeError(f"document must be a string, one of {known}, got {document!r}")
     if document not in _MAPPINGS:
-        raise ValueError(f"document must be one of {', '.join(map(repr, _MAPPINGS))}, got {document!r}")
+        raise ValueError(f"document must be one of {known}, got {document!r}")
     orders, rule = _MAPPINGS[document]
     order = integer("order", order)
     if order not in orders:

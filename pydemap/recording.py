@@ -8,6 +8,7 @@ appears whole or not at all.
 
 from __future__ import annotations
 
+import errno
 import hashlib
 import json
 import os
@@ -34,6 +35,7 @@ __all__ = [
     "Stream",
     "demap_recording",
     "estimate_from_start",
+    "open_gain",
     "open_noise_variance",
     "open_samples",
     "read_constellation",
@@ -46,12 +48,14 @@ SAMPLE_TYPES: Final = ("cf32_le", "cf32_be", "cf64_le", "cf64_be", "ci16_le", "c
 big-endian. Integers become value / 32768, so that full scale is 1."""
 
 BLOCK_SYMBOLS: Final = 1 << 18
-"""Symbols demapped at a time, and those that an estimate of the noise variance looks at."""
+"""Symbols demapped at a time, and those from which an estimate of the noise variance picks."""
 
 # At 16 bits a symbol in float64 such a block of LLRs takes 32 MiB, and the calls' own cost is lost in it.
 # A constellation without structure costs M operations a symbol, so its blocks shrink to keep each call
 # about a second long: the progress bar moves and Ctrl-C is heard.
 _BLOCK_OPERATIONS = 1 << 28
+
+_RAW_REAL_TYPES: Final = {".f32": "<f4", ".f64": "<f8"}
 
 # No line of numbers is longer; a binary file that is called .csv may have no line end at all.
 _LONGEST_LINE = 4096
@@ -204,7 +208,7 @@ class _TextStream(Stream):
 
 
 def open_samples(path: str | os.PathLike[str], sample_type: str | None = None) -> Stream:
-    """Open a file of complex numbers, one a symbol: received samples or channel gains.
+    """Open a file of complex numbers, one a symbol: received samples, or channel gains of that kind.
 
     Parameters
     ----------
@@ -256,11 +260,39 @@ def open_samples(path: str | os.PathLike[str], sample_type: str | None = None) -
         return _opened(path, lambda file: _TextStream(file, path, _complex_row(), np.dtype(np.complex128)))
     suffix = path.suffix.removeprefix(".")
     if sample_type is None and suffix not in SAMPLE_TYPES:
+        _require_file(path, "a SigMF recording, a .npy or .csv file, or raw samples of a named type")
         raise RecordingError(
             f"{path}: a raw file needs its sample type named, one of {', '.join(SAMPLE_TYPES)}; "
             "without one, expected SigMF (.sigmf-meta, .sigmf-data), .npy or .csv"
         )
     return _open_raw_samples(path, sample_type or suffix)
+
+
+def open_gain(path: str | os.PathLike[str]) -> Stream:
+    """Open a file of channel gains, one a symbol, complex or real.
+
+    Parameters
+    ----------
+    path : str or path-like
+        Complex gains as `open_samples` takes samples, or real ones: ``.npy`` (float32 or float64, one
+        dimension), ``.csv`` (one number a line), or raw little-endian ``.f32`` or ``.f64``.
+
+    Returns
+    -------
+    Stream
+        Blocks of complex64 or complex128, or of float32 or float64. Real gains in text are complex128.
+
+    Raises
+    ------
+    RecordingError
+        As `open_samples` does.
+    """
+    path = Path(path)
+    if path.suffix == ".npy":
+        return _open_npy(path, np.complex64, np.complex128, np.float32, np.float64)
+    if path.suffix in _RAW_REAL_TYPES:
+        return _open_raw_real(path)
+    return open_samples(path)
 
 
 def open_noise_variance(path: str | os.PathLike[str]) -> Stream:
@@ -287,13 +319,11 @@ def open_noise_variance(path: str | os.PathLike[str]) -> Stream:
         return _open_npy(path, np.float32, np.float64)
     if path.suffix == ".csv":
         return _opened(path, lambda file: _TextStream(file, path, _real_row, np.dtype(np.float64)))
-    if path.suffix in (".f32", ".f64"):
-        stored = np.dtype("<f4" if path.suffix == ".f32" else "<f8")
-        return _opened(
-            path,
-            lambda file: _BinaryStream(file, (path,), f"raw {stored.name}", stored, stored.newbyteorder("=")),
-        )
-    raise RecordingError(f"{path}: expected noise variances in a .npy, .csv, .f32 or .f64 file")
+    if path.suffix in _RAW_REAL_TYPES:
+        return _open_raw_real(path)
+    expected = "noise variances in a .npy, .csv, .f32 or .f64 file"
+    _require_file(path, expected)
+    raise RecordingError(f"{path}: expected {expected}")
 
 
 def read_constellation(path: str | os.PathLike[str]) -> Constellation:
@@ -327,7 +357,9 @@ def read_constellation(path: str | os.PathLike[str]) -> Constellation:
                 f"{path}: expected a .npz file of arrays points and labels ({problem})"
             ) from problem
     else:
-        raise RecordingError(f"{path}: expected labelled points in a .csv or .npz file")
+        expected = "labelled points in a .csv or .npz file"
+        _require_file(path, expected)
+        raise RecordingError(f"{path}: expected {expected}")
     try:
         return Constellation(points, labels)
     except (TypeError, ValueError) as problem:
@@ -367,7 +399,7 @@ def demap_recording(
     constellation_name : str, optional
         What the constellation is called, for the sidecar; its points and labels stand there in any case.
     gain : Stream, optional
-        Complex channel gain of each symbol, from `open_samples`.
+        Channel gain of each symbol, complex or real, from `open_gain`.
     threads : int, optional
         Threads that share each block.
     progress : callable, optional
@@ -465,23 +497,39 @@ def demap_recording(
 
 def estimate_from_start(
     samples: Stream, constellation: Constellation, *, gain: Stream | None = None
-) -> float:
+) -> tuple[float, str]:
     """Estimate the noise variance, blind, from a stream's next `BLOCK_SYMBOLS` symbols, left to be read.
+
+    Of the symbols there that are finite, as are their gains, max(1024, 2^22 / M) are evenly picked, or all
+    of fewer: the time does not grow with the order M of the constellation.
+
+    Returns
+    -------
+    n0 : float
+        The estimate.
+    origin : str
+        How many symbols it comes from, and of how many, for the sidecar.
 
     Raises
     ------
     RecordingError
-        None of the symbols is finite, there is a gain for only some of them, or a file cannot be read.
+        None of the symbols is finite, they have no power, there is a gain for only some of them, or a file
+        cannot be read.
     """
     y = samples.peek(BLOCK_SYMBOLS)
+    finite = np.isfinite(y)
     h = None
     if gain is not None:
         h = gain.peek(len(y))
         _require_equal_lengths(gain, len(h), samples, len(y))
+        finite &= np.isfinite(h)
+    most = max(1024, 2**22 // constellation.order)
     try:
-        return estimate_noise_variance(y, constellation, gain=h)
+        n0 = estimate_noise_variance(y, constellation, gain=h, max_samples=most)
     except ValueError as problem:
         raise RecordingError(f"{samples.name}: noise variance cannot be estimated: {problem}") from problem
+    used = min(most, np.count_nonzero(finite))
+    return n0, f"estimated from {used} of the first {len(y)} symbols, evenly picked"
 
 
 def write_sigmf(
@@ -573,6 +621,14 @@ def _open_raw_samples(path: Path | None, sample_type: str) -> Stream:
     return _opened(path, lambda file: _sample_stream(file, paths, "raw", sample_type))
 
 
+def _open_raw_real(path: Path) -> Stream:
+    stored = np.dtype(_RAW_REAL_TYPES[path.suffix])
+    return _opened(
+        path,
+        lambda file: _BinaryStream(file, (path,), f"raw {stored.name}", stored, stored.newbyteorder("=")),
+    )
+
+
 def _open_npy(path: Path, *types: type[np.generic]) -> Stream:
     def stream(file: BinaryIO) -> Stream:
         try:
@@ -657,6 +713,16 @@ def _opened(path: Path | None, use: Callable[[BinaryIO], _T]) -> _T:
     except BaseException:
         file.close()
         raise
+
+
+def _require_file(path: Path, expected: str) -> None:
+    """Where a name tells no format: a missing file or a directory is not to pass for one of unknown kind."""
+    try:
+        problem = os.strerror(errno.EISDIR) if stat.S_ISDIR(os.stat(path).st_mode) else None
+    except OSError as refused:
+        problem = refused.strerror
+    if problem is not None:
+        raise RecordingError(f"{path}: cannot be read: {problem}; expected {expected}")
 
 
 @contextmanager

@@ -140,7 +140,44 @@ def test_llr_with_an_estimated_noise_variance(work, capsys, gain):
     np.testing.assert_array_equal(np.load("out.npy"), expected)
     said = json.loads((work / "out.npy.json").read_text())["channel"]
     assert said["noise_value"] == n0
-    assert "estimated" in said["noise_origin"]
+    assert said["noise_origin"] == f"estimated from {N} of the first {N} symbols, evenly picked"
+
+
+@pytest.mark.parametrize(("order", "used"), [(16, 4990), (1024, 4096)])  # max(1024, 2^22 / M), or all
+def test_the_sidecar_says_how_many_symbols_an_estimate_comes_from(work, order, used):
+    """That many finite symbols, evenly picked, are enough to get the same estimate to the bit."""
+    constellation = pydemap.square_qam(order)
+    y = noisy(constellation, 5000, scale=0.01)
+    y[:7] = np.nan
+    h = np.ones(len(y), np.float32)
+    h[7:10] = np.inf
+    h.tofile("h.f32")
+    np.save("y.npy", y)
+    assert run(f"llr y.npy out.npy --order {order} --estimate-n0 --gain-file h.f32") == 0
+    said = json.loads((work / "out.npy.json").read_text())["channel"]
+    assert said["noise_origin"] == f"estimated from {used} of the first 5000 symbols, evenly picked"
+    pick = y[10:][np.linspace(0, 4989, used).astype(int)]
+    assert said["noise_value"] == pydemap.estimate_noise_variance(pick, constellation)
+
+
+@pytest.mark.parametrize("dtype", ["float32", "float64"])
+@pytest.mark.parametrize("kind", ["npy", "raw", "csv"])
+def test_llr_with_real_gains(work, dtype, kind):
+    y = noisy(pydemap.square_qam(16))
+    h = np.random.default_rng(4).normal(size=N).astype(dtype)
+    h[:2] = np.nan, np.inf
+    if kind == "npy":
+        np.save("h.npy", h)
+    elif kind == "csv":
+        (work / "h.csv").write_text("gain\n" + "".join(f"{value!r}\n" for value in h.tolist()))
+    else:
+        kind = "f32" if dtype == "float32" else "f64"
+        h.tofile(f"h.{kind}")
+    np.save("y.npy", y)
+    assert run(f"llr y.npy out.npy --order 16 --n0 0.1 --output float64 --gain-file h.{kind}") == 0
+    demapper = pydemap.SoftDemapper(pydemap.square_qam(16), output="float64")
+    np.testing.assert_array_equal(np.load("out.npy"), demapper(y, 0.1, gain=h))
+    assert json.loads((work / "out.npy.json").read_text())["channel"]["gain"] == f"h.{kind}"
 
 
 def test_llr_says_what_it_wrote(work, capsys):
@@ -192,11 +229,17 @@ def test_llr_from_standard_input(work, sample_type):
         ("llr y.npy out.npy --n0 1 --order 16 --rule best", "'best' is not one of"),
         (
             "llr y.npy out.npy --n0 1 --order 16 --output float16",
-            "float16: expected float32, float64 or BITS:STEP",
+            "'float16': expected float32, float64 or words of BITS:STEP such as 6:0.5$",
         ),
-        ("llr y.npy out.npy --n0 1 --order 16 --output 6:", "6:: expected float32, float64 or BITS:STEP"),
-        ("llr y.npy out.npy --n0 1 --order 16 --output 17:1", "17:1: expected .*bits must be from 2 to 16"),
-        ("llr y.npy out.npy --n0 1 --order 16 --output 6:0", "6:0: expected .*step must be"),
+        *(
+            (
+                f"llr y.npy out.npy --n0 1 --order 16 --output {given}",
+                f"'{given}': expected float32, float64 or words of BITS:STEP such as 6:0.5$",
+            )
+            for given in ("6", "6:", ":0.5", "6.5:1", "6:0.5:1", "six:0.5")
+        ),
+        ("llr y.npy out.npy --n0 1 --order 16 --output 17:1", "'17:1': bits must be from 2 to 16, got 17"),
+        ("llr y.npy out.npy --n0 1 --order 16 --output 6:0", "'6:0': step must be .*got 0"),
         ("llr y.npy out.npy --n0 1 --order 16 --positive-bit 2", "2 is not in the range"),
         ("llr y.npy out.npy --n0 1 --order 16 --threads 0", "0 is not in the range"),
         ("llr y.npy out.npy --n0 1 --order 16 --input-type cu8", "'cu8' is not one of"),
@@ -223,6 +266,26 @@ def test_wrong_calls(work, capsys, command, message):
         ("llr no.npy out.npy --order 16 --n0 1", "no.npy: cannot be read: No such file"),
         ("llr cut.cf32_le out.npy --order 16 --n0 1", "cut.cf32_le: 15996 bytes .*cut short"),
         ("llr y.bin out.npy --order 16 --n0 1", "y.bin: a raw file needs its sample type named"),
+        (
+            "llr nofile out.npy --order 16 --n0 1",
+            "nofile: cannot be read: No such file or directory; expected a SigMF recording, a .npy or .csv",
+        ),
+        (
+            "llr . out.npy --order 16 --n0 1",
+            r"\.: cannot be read: Is a directory; expected a SigMF recording, a .npy or .csv file",
+        ),
+        (
+            "llr y.npy out.npy --order 16 --n0-file nofile",
+            "nofile: cannot be read: No such file or directory; expected noise variances in a .npy",
+        ),
+        (
+            "llr y.npy out.npy --order 16 --n0 1 --gain-file nofile",
+            "nofile: cannot be read: No such file or directory; expected",
+        ),
+        (
+            "llr y.npy out.npy --points . --n0 1",
+            r"\.: cannot be read: Is a directory; expected labelled points in a .csv or .npz file",
+        ),
         ("llr rec out.npy --order 16 --n0 1", "rec.sigmf-meta: core:datatype cu8 is not supported"),
         ("llr y.npy y.npy --order 16 --n0 1", "y.npy: is read in this run"),
         ("llr y.npy no/out.npy --order 16 --n0 1", "no/out.npy: cannot be written: .*no is not a directory"),
@@ -238,11 +301,14 @@ def test_wrong_calls(work, capsys, command, message):
             "y.npy: holds complex64, expected float32 or float64",
         ),
         (
-            "llr y.npy out.npy --order 16 --n0 1 --gain-file zero.npy",
-            "zero.npy: holds float64, expected complex64",
+            "llr y.npy out.npy --order 16 --n0 1 --gain-file words.npy",
+            "words.npy: holds int16, expected complex64 or complex128 or float32 or float64",
         ),
+        ("llr y.npy out.npy --order 16 --n0 1 --gain-file short.npy", "short.npy: 1999 numbers"),
+        ("llr y.npy out.npy --order 16 --n0 1 --gain-file cut.f32", "cut.f32: 7998 bytes .*cut short"),
         ("llr y.npy out.npy --points p.csv --n0 1", "p.csv, line 1: .*expected re,im,label"),
         ("llr nan.npy out.npy --order 16 --estimate-n0", "nan.npy: noise variance cannot be estimated"),
+        ("llr dead.npy out.npy --order 16 --estimate-n0", "dead.npy: noise variance cannot be estimated"),
         (
             "llr y.npy out.npy --order 16 --estimate-n0 --gain-file nan.npy",
             "nan.npy: 3 numbers; .*2000 symbols",
@@ -257,9 +323,12 @@ def test_failing_runs(work, capsys, command, message):
     y = noisy(pydemap.square_qam(16))
     np.save("y.npy", y)
     np.save("nan.npy", np.full(3, np.nan, np.complex64))
+    np.save("dead.npy", np.zeros(N, np.complex64))
     np.save("short.npy", np.ones(N - 1))
+    np.save("words.npy", np.ones(N, np.int16))
     np.save("zero.npy", np.where(np.arange(N) == 1500, 0.0, 1.0))
     (work / "cut.cf32_le").write_bytes(y.tobytes()[:-4])
+    (work / "cut.f32").write_bytes(bytes(4 * N - 2))
     (work / "y.bin").write_bytes(y.tobytes())
     (work / "p.csv").write_text("1\n")
     (work / "rec.sigmf-meta").write_text('{"global": {"core:datatype": "cu8"}}')
@@ -419,6 +488,13 @@ def test_version_and_help(capsys):
     for command in ("--help", "llr --help", "show --help", "demo --help"):
         assert run(command) == 0
         assert "Usage: pydemap" in capsys.readouterr().out
+
+
+def test_help_states_gains_and_the_extent_of_an_estimate(capsys):
+    assert run("llr --help") == 0
+    text = " ".join(capsys.readouterr().out.split())
+    assert "or real: .npy, .csv (one number a line), raw .f32 or .f64." in text
+    assert f"from the first {BLOCK} symbols, of which max(1024, 2^22 / M) are evenly picked, or all" in text
 
 
 # ---- show

@@ -337,7 +337,7 @@ def test_noise_variance_looks_at_so_many_samples():
         ([1j], {"gain": [1, 2]}, ValueError, r"gain of shape \(2,\) does not broadcast to \(1,\)"),
         ([1j], {"known": "x"}, TypeError, "known must be complex symbols"),
         ([1j], {"known": [1, 2]}, ValueError, r"known of shape \(2,\) does not broadcast to \(1,\)"),
-        ([1j], {"max_samples": 0}, ValueError, "max_samples must be >= 1, got 0"),
+        ([1j], {"max_samples": 0}, ValueError, "max_samples must be an integer >= 1, got 0"),
     ],
 )
 def test_noise_variance_refuses(y, more, error, message):

@@ -167,7 +167,8 @@ def test_g9701_is_not_gray(order):
     "document, order, error, message",
     [
         ("3GPP", 16, ValueError, "document must be one of '3GPP TS 38.211', .* got '3GPP'"),
-        (None, 16, ValueError, "got None"),
+        (None, 16, TypeError, "document must be a string, one of '3GPP TS 38.211', .* got None"),
+        ([G9701], 16, TypeError, r"document must be a string, .* got \['ITU-T G.9701'\]"),
         (
             TS_38_211,
             32,

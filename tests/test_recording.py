@@ -16,7 +16,7 @@ from hypothesis import strategies as st
 
 import pydemap
 from pydemap import recording
-from pydemap.recording import RecordingError, demap_recording, open_noise_variance, open_samples
+from pydemap.recording import RecordingError, demap_recording, open_gain, open_noise_variance, open_samples
 
 # One sample, 1 - 0.5j, written out by hand from IEEE 754 and two's complement.
 HAND_WRITTEN = {
@@ -208,6 +208,23 @@ def test_raw_and_text_noise_variances(tmp_path):
         assert read.tolist() == [0.5, 1, 2]
 
 
+def test_gains_complex_or_real(tmp_path):
+    (tmp_path / "h.f32").write_bytes(struct.pack("<3f", 0.5, -1, 2))
+    (tmp_path / "h.f64").write_bytes(struct.pack("<3d", 0.5, -1, 2))
+    (tmp_path / "h.cf32_be").write_bytes(struct.pack(">6f", 0.5, 0, -1, 0, 2, 0))
+    (tmp_path / "h.csv").write_text("gain\n0.5\n-1\n2\n")
+    kinds = [("f32", "f4"), ("f64", "f8"), ("cf32_be", "c8"), ("csv", "c16")]
+    for dtype in ("f4", "f8", "c8", "c16"):
+        for order in "<>":
+            np.save(tmp_path / f"{dtype}{'<>'.index(order)}.npy", np.array([0.5, -1, 2], order + dtype))
+    files = [(f"h.{kind}", dtype) for kind, dtype in kinds]
+    files += [(f"{dtype}{order}.npy", dtype) for dtype in ("f4", "f8", "c8", "c16") for order in (0, 1)]
+    for name, dtype in files:
+        gains = read_all(open_gain(tmp_path / name))
+        assert gains.dtype == dtype
+        assert gains.tolist() == [0.5, -1, 2]
+
+
 def test_constellations_of_the_user(tmp_path):
     constellation = pydemap.published_mapping("ITU-T G.9701", 32)
     rows = zip(constellation.points.tolist(), constellation.labels.tolist(), strict=True)
@@ -368,6 +385,23 @@ def test_npy_samples_refused(tmp_path, name, array, message):
     np.save(tmp_path / name, array)
     with pytest.raises(RecordingError, match=f"{name}: .*{message}"):
         open_samples(tmp_path / name)
+
+
+@pytest.mark.parametrize(
+    ("read", "expected"),
+    [
+        (open_samples, "a SigMF recording, a .npy or .csv file, or raw samples of a named type"),
+        (open_gain, "a SigMF recording, a .npy or .csv file, or raw samples of a named type"),
+        (open_noise_variance, "noise variances in a .npy, .csv, .f32 or .f64 file"),
+        (recording.read_constellation, "labelled points in a .csv or .npz file"),
+    ],
+)
+def test_a_missing_file_or_a_directory_is_none_of_unknown_kind(tmp_path, read, expected):
+    (tmp_path / "there").mkdir()
+    for name, problem in [("nofile", "No such file or directory"), ("there", "Is a directory")]:
+        with pytest.raises(RecordingError) as refused:
+            read(tmp_path / name)
+        assert str(refused.value) == f"{tmp_path / name}: cannot be read: {problem}; expected {expected}"
 
 
 def test_kinds_of_file_refused(tmp_path):

@@ -70,6 +70,7 @@ static inline void F(equalise)(struct F(block) *b, int i, const real *y, const r
     b->poison[i] = poison;
 }
 
+/* The block keeps from call to call what is the same for all symbols. */
 static void F(load)(const struct pdm_call *call, size_t first, int count, struct F(block) *b)
 {
     const struct pdm_plan *plan = call->plan;
@@ -85,7 +86,7 @@ static void F(load)(const struct pdm_call *call, size_t first, int count, struct
     const real *noise = (const real *)call->noise;
     if (call->noise_stride)
         EACH_LANE b->noise[i] = (double)noise[first + (size_t)(i < count ? i : 0)];
-    else
+    else if (first == 0 || !b->same_noise)
         EACH_LANE b->noise[i] = noise ? (double)noise[0] : 1;
 
     if (call->gain) {
@@ -97,26 +98,27 @@ static void F(load)(const struct pdm_call *call, size_t first, int count, struct
         EACH_LANE
         {
             const real yr = y[2 * i], yi = y[2 * i + 1], poison = (yr - yr) + (yi - yi);
-            const real vr = yr * u, vi = yi * u;
-            b->v[0][i] = poison == 0 ? F(most)(F(least)(vr, most), -most) : 0;
-            b->v[1][i] = poison == 0 ? F(most)(F(least)(vi, most), -most) : 0;
+            const real vr = F(most)(F(least)(yr * u, most), -most);
+            const real vi = F(most)(F(least)(yi * u, most), -most);
+            b->v[0][i] = poison == 0 ? vr : 0;
+            b->v[1][i] = poison == 0 ? vi : 0;
             b->poison[i] = poison;
         }
-        for (int i = 0; i < (b->same_noise ? 1 : LANES); i++)
-            F(set_noise)(b, i, b->noise[i] * square);
-        if (b->same_noise) {
-            EACH_LANE b->noise[i] = b->noise[0];
-            EACH_LANE b->lift[i] = b->lift[0];
-        }
+        if (first == 0 || !b->same_noise)
+            EACH_LANE F(set_noise)(b, i, b->noise[i] * square);
     }
-    b->lifted = 0;
-    EACH_LANE b->lifted |= b->lift[i] > 1;
+    if (first == 0 || !b->same_noise) {
+        b->lifted = 0;
+        EACH_LANE b->lifted |= b->lift[i] > 1;
+    }
 
     b->has_prior = call->prior != 0;
     const int n = plan->bits;
+    if (!call->prior)
+        return;
     const real *prior = (const real *)call->prior + (size_t)n * first;
     const real sign = call->settings.positive_bit ? -R(1.) : R(1.);
-    for (int k = 0; k < (call->prior ? n : 0); k++)
+    for (int k = 0; k < n; k++)
         EACH_LANE
         {
             const real p = i < count ? prior[i * n + k] * sign : 0;
@@ -126,7 +128,7 @@ static void F(load)(const struct pdm_call *call, size_t first, int count, struct
 }
 
 /* From LLRs by bit, positive meaning 0, to LLRs as they leave, symbol by symbol. */
-static inline void F(finish)(const int n, const pdm_settings *settings, struct F(block) *b, real *llr)
+BY_CONSTANT void F(finish)(const int n, const pdm_settings *settings, struct F(block) *b, real *llr)
 {
     for (int k = 0; k < n; k++) {
         real *l = b->llr[k];

@@ -179,7 +179,7 @@ static void F(view_boxes)(const struct pdm_plan *plan, const struct F(block) *b,
  * slot without a level gets the largest metric.  Returns the slots. */
 static inline int F(slot_metrics)(const struct pdm_plan *plan, int x, int axis,
                                   const struct F(block) *b, const struct F(scene) *scene,
-                                  real slot[PDM_MAX_LEVELS][LANES])
+                                  real slot[][LANES])
 {
     const struct pdm_box *box = &plan->box[x];
     const struct F(view) *view = &scene->view[x][axis];
@@ -279,10 +279,10 @@ static inline void F(box_cost)(const struct pdm_plan *plan, int x, const struct 
  * minimum) over the slots whose pattern p has that value, slot[0] that over
  * all.  The slots are overwritten. */
 #define DEFINE_HALVE(name, combine)                                                             \
-    static inline void F(name)(int patterns, real slot[PDM_MAX_LEVELS][LANES],                  \
+    static inline void F(name)(int patterns, real slot[][LANES],                                \
                                real half[PDM_MAX_PATTERNS][2][LANES])                           \
     {                                                                                           \
-        real side[PDM_MAX_LEVELS / 2][LANES];                                                   \
+        real side[MAX_HALF][LANES];                                                             \
         for (int p = 0; p < patterns; p++) {                                                    \
             const int rest = 1 << (patterns - 1 - p);                                           \
             for (int value = 0; value < 2; value++) {                                           \
@@ -302,10 +302,10 @@ DEFINE_HALVE(halve_least, F(least))
  * others, added up from the differences of slots that differ in this pattern
  * alone: it keeps its digits where the two sums are nearly equal, as at low
  * Es/N0, and each is only known to within its own rounding. */
-static inline void F(differences)(int patterns, real slot[PDM_MAX_LEVELS][LANES],
+static inline void F(differences)(int patterns, real slot[][LANES],
                                   real difference[PDM_MAX_PATTERNS][LANES])
 {
-    real side[PDM_MAX_LEVELS / 2][LANES];
+    real side[MAX_HALF][LANES];
     for (int p = 0; p < patterns; p++) {
         const int way = 1 << (patterns - 1 - p), pairs = 1 << (patterns - 1);
         for (int s = 0; s < pairs; s++) {
@@ -320,7 +320,7 @@ static inline void F(differences)(int patterns, real slot[PDM_MAX_LEVELS][LANES]
 #undef REDUCE
 #undef DEFINE_HALVE
 
-static void F(boxes_max_log)(const struct pdm_plan *plan, struct F(block) *b)
+APART void F(boxes_max_log)(const struct pdm_plan *plan, struct F(block) *b)
 {
     struct F(scene) scene;
     real cost[LANES], slot[PDM_MAX_LEVELS][LANES];
@@ -401,7 +401,7 @@ static void F(far_sum)(const struct pdm_plan *plan, const struct F(parts) *parts
         }
 }
 
-static void F(boxes_exact)(const struct pdm_plan *plan, struct F(block) *b)
+APART void F(boxes_exact)(const struct pdm_plan *plan, struct F(block) *b)
 {
     struct F(scene) scene;
     struct F(parts) parts;
@@ -502,7 +502,7 @@ static void F(boxes_exact)(const struct pdm_plan *plan, struct F(block) *b)
     }
 }
 
-static void F(boxes_slice)(const struct pdm_plan *plan, struct F(block) *b)
+APART void F(boxes_slice)(const struct pdm_plan *plan, struct F(block) *b)
 {
     struct F(scene) scene;
     F(view_boxes)(plan, b, 1, &scene);

@@ -123,11 +123,37 @@ static int check_settings(struct pdm_call *call, const pdm_settings *settings, s
     if (most_bits && (settings->word_bits < 2 || settings->word_bits > most_bits ||
                       !(settings->word_step >= 0x1p-126 && settings->word_step <= 0x1p127)))
         return PDM_BAD_WORD;
-    call->settings = *settings;
+    call->settings.rule = settings->rule;
+    call->settings.extrinsic = settings->extrinsic;
+    call->settings.positive_bit = settings->positive_bit;
+    if (most_bits) {
+        call->settings.word_bits = settings->word_bits;
+        call->settings.word_step = settings->word_step;
+    }
     call->noise_stride = n_noise != 1;
-    if (!most_bits)
-        call->settings.word_bits = 2;
     return PDM_OK;
+}
+
+/* Field by field: an initialiser would have compilers call memset. */
+static void request(struct pdm_call *call, const pdm_plan *plan, size_t count, const void *y,
+                    const void *noise, const void *gain, const void *prior, void *out,
+                    enum pdm_output output)
+{
+    call->plan = plan;
+    call->settings.rule = PDM_MAX_LOG;
+    call->settings.extrinsic = 0;
+    call->settings.positive_bit = 0;
+    call->settings.word_bits = 2;
+    call->settings.word_step = 1;
+    call->count = count;
+    call->y = y;
+    call->noise = noise;
+    call->noise_stride = 0;
+    call->gain = gain;
+    call->gain_stride = 0;
+    call->prior = prior;
+    call->out = out;
+    call->output = output;
 }
 
 static int run_f32(struct pdm_call *call, const pdm_settings *settings, size_t n_noise,
@@ -152,8 +178,8 @@ int pdm_demap_f32(const pdm_plan *plan, const pdm_settings *settings, size_t n_s
                   const float *gain_iq, size_t gain_count, const float *prior,
                   float *llr, size_t *where)
 {
-    struct pdm_call call = {.plan = plan, .count = n_symbols, .y = y_iq, .noise = noise_variance,
-                            .gain = gain_iq, .prior = prior, .out = llr, .output = PDM_OUT_REAL};
+    struct pdm_call call;
+    request(&call, plan, n_symbols, y_iq, noise_variance, gain_iq, prior, llr, PDM_OUT_REAL);
     return run_f32(&call, settings, noise_count, gain_count, 0, where);
 }
 
@@ -162,8 +188,8 @@ int pdm_demap_i8(const pdm_plan *plan, const pdm_settings *settings, size_t n_sy
                  const float *gain_iq, size_t gain_count, const float *prior,
                  int8_t *words, size_t *where)
 {
-    struct pdm_call call = {.plan = plan, .count = n_symbols, .y = y_iq, .noise = noise_variance,
-                            .gain = gain_iq, .prior = prior, .out = words, .output = PDM_OUT_I8};
+    struct pdm_call call;
+    request(&call, plan, n_symbols, y_iq, noise_variance, gain_iq, prior, words, PDM_OUT_I8);
     return run_f32(&call, settings, noise_count, gain_count, 8, where);
 }
 
@@ -172,8 +198,8 @@ int pdm_demap_i16(const pdm_plan *plan, const pdm_settings *settings, size_t n_s
                   const float *gain_iq, size_t gain_count, const float *prior,
                   int16_t *words, size_t *where)
 {
-    struct pdm_call call = {.plan = plan, .count = n_symbols, .y = y_iq, .noise = noise_variance,
-                            .gain = gain_iq, .prior = prior, .out = words, .output = PDM_OUT_I16};
+    struct pdm_call call;
+    request(&call, plan, n_symbols, y_iq, noise_variance, gain_iq, prior, words, PDM_OUT_I16);
     return run_f32(&call, settings, noise_count, gain_count, 16, where);
 }
 
@@ -182,8 +208,8 @@ int pdm_demap_f64(const pdm_plan *plan, const pdm_settings *settings, size_t n_s
                   const double *gain_iq, size_t gain_count, const double *prior,
                   double *llr, size_t *where)
 {
-    struct pdm_call call = {.plan = plan, .count = n_symbols, .y = y_iq, .noise = noise_variance,
-                            .gain = gain_iq, .prior = prior, .out = llr, .output = PDM_OUT_REAL};
+    struct pdm_call call;
+    request(&call, plan, n_symbols, y_iq, noise_variance, gain_iq, prior, llr, PDM_OUT_REAL);
     const int status = check_settings(&call, settings, noise_count, gain_count, 0);
     if (status != PDM_OK)
         return status;
@@ -200,8 +226,8 @@ int pdm_demap_f64(const pdm_plan *plan, const pdm_settings *settings, size_t n_s
 int pdm_slice_f32(const pdm_plan *plan, size_t n_symbols, const float *y_iq,
                   const float *gain_iq, size_t gain_count, uint16_t *label)
 {
-    struct pdm_call call = {.plan = plan, .count = n_symbols, .y = y_iq, .gain = gain_iq,
-                            .out = label, .output = PDM_OUT_LABEL};
+    struct pdm_call call;
+    request(&call, plan, n_symbols, y_iq, NULL, gain_iq, NULL, label, PDM_OUT_LABEL);
     const int status = check(&call, gain_count);
     if (status == PDM_OK)
         kernels()->run_f32(&call);
@@ -211,8 +237,8 @@ int pdm_slice_f32(const pdm_plan *plan, size_t n_symbols, const float *y_iq,
 int pdm_slice_f64(const pdm_plan *plan, size_t n_symbols, const double *y_iq,
                   const double *gain_iq, size_t gain_count, uint16_t *label)
 {
-    struct pdm_call call = {.plan = plan, .count = n_symbols, .y = y_iq, .gain = gain_iq,
-                            .out = label, .output = PDM_OUT_LABEL};
+    struct pdm_call call;
+    request(&call, plan, n_symbols, y_iq, NULL, gain_iq, NULL, label, PDM_OUT_LABEL);
     const int status = check(&call, gain_count);
     if (status == PDM_OK)
         kernels()->run_f64(&call);

@@ -19,15 +19,17 @@ struct F(fold_table) {
     word from_q[PDM_MAX_BITS * LANES];          /* all ones: takes Q, else I */
     word turn[PDM_MAX_BITS * LANES];            /* sign bit: beyond the threshold the bit is 1 */
     real most[PDM_MAX_BITS * LANES];            /* R */
+    real slope[PDM_MAX_BITS * LANES];           /* 4 a / N0, if it is the same for all symbols */
     real a[PDM_MAX_BITS * LANES], per_spacing[PDM_MAX_BITS * LANES];
     struct {
         word keep[PDM_MAX_BITS * LANES];        /* without the sign bit: fold once more */
         real threshold[PDM_MAX_BITS * LANES];
     } step[PDM_MAX_PATTERNS - 1];
     int steps;
+    int order;
 };
 
-static void F(make_fold_table)(const struct pdm_plan *plan, int linear, int positive_bit,
+APART void F(make_fold_table)(const struct pdm_plan *plan, int linear, int positive_bit,
                                struct F(fold_table) *table)
 {
     const int n = plan->bits;
@@ -51,52 +53,108 @@ static void F(make_fold_table)(const struct pdm_plan *plan, int linear, int posi
             }
         }
     }
+    int halves = 1, turns = 1;
+    for (int p = 0; p < n; p++) {
+        halves &= (table->from_q[p] != 0) == (2 * p >= n);
+        turns &= (table->from_q[p] != 0) == p % 2;
+    }
+    table->order = halves ? BITS_IN_HALVES : turns ? BITS_IN_TURN : BITS_ANYHOW;
     for (int p = n; p < n * LANES; p++) {
         table->from_q[p] = table->from_q[p - n];
         table->turn[p] = table->turn[p - n];
         table->most[p] = table->most[p - n];
         table->a[p] = table->a[p - n];
         table->per_spacing[p] = table->per_spacing[p - n];
-        for (int s = 0; s < table->steps; s++) {
+        for (int s = 0; s < PDM_MAX_PATTERNS - 1; s++) {
             table->step[s].keep[p] = table->step[s].keep[p - n];
             table->step[s].threshold[p] = table->step[s].threshold[p - n];
         }
     }
 }
 
-static inline void F(fold)(const int n, const struct pdm_plan *plan,
-                           const struct F(fold_table) *table, const struct F(block) *b, real *llr)
+/* wide[place] = the value of the place's symbol and axis, from values in turn
+ * for I and Q.  The two usual orders of the bits, first half on I or every
+ * second one, are known to the compiler, which then needs one permutation. */
+BY_CONSTANT void F(spread)(const int n, const struct F(fold_table) *table, const real *restrict iq,
+                           real *restrict wide)
 {
-    real v[PDM_MAX_BITS * LANES], slope[PDM_MAX_BITS * LANES], axis_slope[2][LANES];
+    if (n % 2 == 0 && table->order == BITS_IN_HALVES) {
+        for (int i = 0; i < LANES; i++)
+            for (int k = 0; k < n; k++)
+                wide[i * n + k] = iq[2 * i + (2 * k >= n)];
+    } else if (n % 2 == 0 && table->order == BITS_IN_TURN) {
+        for (int i = 0; i < LANES; i++)
+            for (int k = 0; k < n; k++)
+                wide[i * n + k] = iq[2 * i + k % 2];
+    } else {
+        real other[PDM_MAX_BITS * LANES];
+        for (int i = 0; i < LANES; i++)
+            for (int k = 0; k < n; k++)
+                wide[i * n + k] = iq[2 * i];
+        for (int i = 0; i < LANES; i++)
+            for (int k = 0; k < n; k++)
+                other[i * n + k] = iq[2 * i + 1];
+        for (int p = 0; p < n * LANES; p++)
+            wide[p] = table->from_q[p] ? other[p] : wide[p];
+    }
+}
+
+BY_CONSTANT void F(slopes)(const int n, const struct pdm_plan *plan, const struct F(block) *b,
+                         const struct F(fold_table) *table, real *slope)
+{
+    real axis_slope[2][LANES], iq[2 * LANES];
     for (int axis = 0; axis < 2; axis++)
         F(scale)(b, 4 * plan->half_spacing[axis], axis_slope[axis]);
     EACH_LANE
     {
-        const real u = b->v[0][i] - (real)plan->centre[0] + b->poison[i];
-        const real w = b->v[1][i] - (real)plan->centre[1] + b->poison[i];
-        for (int k = 0; k < n; k++) {
-            const int p = i * n + k;
-            v[p] = table->from_q[p] ? w : u;
-            slope[p] = table->from_q[p] ? axis_slope[1][i] : axis_slope[0][i];
-        }
+        iq[2 * i] = axis_slope[0][i];
+        iq[2 * i + 1] = axis_slope[1][i];
     }
-    for (int s = 0; s < table->steps; s++)
-        for (int p = 0; p < n * LANES; p++)
-            v[p] = F(from_word)(F(to_word)(v[p]) & table->step[s].keep[p]) -
-                   table->step[s].threshold[p];
+    F(spread)(n, table, iq, slope);
+}
+
+BY_CONSTANT void F(fold_places)(const int n, const int steps, const struct F(fold_table) *table,
+                                const real *slope, const real *restrict v, real *restrict llr)
+{
     for (int p = 0; p < n * LANES; p++) {
         const word sign = (word)1 << (REAL_BITS - 1);
-        const real x = F(magnitude)(v[p]);
+        real u = v[p];
+        for (int s = 0; s < steps; s++)
+            u = F(from_word)(F(to_word)(u) & table->step[s].keep[p]) - table->step[s].threshold[p];
+        const real x = F(magnitude)(u);
         const real r = F(least)((x * table->per_spacing[p] - R(0.5) + MAGIC) - MAGIC, table->most[p]);
         const real l = slope[p] * (r + 1) * (x - r * table->a[p]);
         const real held = l > LARGEST ? LARGEST : l;    /* NaN stays */
-        llr[p] = F(from_word)(F(to_word)(held) ^ (F(to_word)(v[p]) & sign) ^ table->turn[p]);
+        llr[p] = F(from_word)(F(to_word)(held) ^ (F(to_word)(u) & sign) ^ table->turn[p]);
     }
+}
+
+BY_CONSTANT void F(fold)(const int n, const struct pdm_plan *plan,
+                         const struct F(fold_table) *table, const struct F(block) *b, real *llr)
+{
+    real v[PDM_MAX_BITS * LANES], each_slope[PDM_MAX_BITS * LANES], iq[2 * LANES];
+    const real centre_i = (real)plan->centre[0], centre_q = (real)plan->centre[1];
+    const real *slope = table->slope;
+    const int even = (n + 1) / 2 - 1;   /* steps of a square, a constant */
+    if (!b->same_noise) {
+        F(slopes)(n, plan, b, table, each_slope);
+        slope = each_slope;
+    }
+    EACH_LANE
+    {
+        iq[2 * i] = b->v[0][i] - centre_i + b->poison[i];
+        iq[2 * i + 1] = b->v[1][i] - centre_q + b->poison[i];
+    }
+    F(spread)(n, table, iq, v);
+    if (table->steps <= even)
+        F(fold_places)(n, even, table, slope, v, llr);
+    else
+        F(fold_places)(n, table->steps, table, slope, v, llr);
 }
 
 /* What fold() leaves out because it hardly ever happens: N0 below LEAST_NOISE,
  * and a prior (rule linear only, max-log then takes boxes.h). */
-static void F(fold_rarities)(const struct pdm_plan *plan, const struct F(block) *b,
+APART void F(fold_rarities)(const struct pdm_plan *plan, const struct F(block) *b,
                              const pdm_settings *settings, real *llr)
 {
     const int n = plan->bits;

@@ -30,10 +30,27 @@
 #endif
 #define EACH_LANE for (int i = 0; i < LANES; i++)
 
+/* For functions of a number of bits that is a constant where they are called:
+ * left to itself a compiler keeps one copy for all, and no vectors.  And for
+ * the opposite: frames that should not all lie on the stack at once. */
+#if defined(__GNUC__)
+#define BY_CONSTANT static inline __attribute__((always_inline))
+#define APART static __attribute__((noinline))
+#else
+#define BY_CONSTANT static inline
+#define APART static
+#endif
+
+enum { BITS_IN_HALVES, BITS_IN_TURN, BITS_ANYHOW }; /* of a symbol, on I and Q */
+
 union double_bits {
     double r;
     uint64_t w;
 };
+
+/* Points are taken in chunks of 2^CHUNK_BITS labels. */
+#define CHUNK_BITS 6
+#define MAX_HALF ((PDM_MAX_LEVELS > 1 << CHUNK_BITS ? PDM_MAX_LEVELS : 1 << CHUNK_BITS) / 2)
 
 #define LOG2_E 1.44269504088896339
 #define LOG2_E_LOW 2.0355273740931033e-17

@@ -334,6 +334,8 @@ static int write_boxes(const struct grid *g, size_t dir, const struct split *s,
                 return 0;
             plan->box[b].axis[axis].first_slot = (uint16_t)slots;
             slots += (size_t)1 << plan->box[b].axis[axis].patterns;
+            if ((1 << plan->box[b].axis[axis].patterns) > PDM_MAX_LEVELS)
+                return 0;
             if (count[axis] > 1)
                 cost += (size_t)1 << plan->box[b].axis[axis].patterns;
         }
@@ -437,12 +439,15 @@ int pdm_plan_init(pdm_plan *plan, size_t plan_nbytes, const double *points_iq,
         tail[labels[i]] = 1;
     }
     sort(points_iq, 0, scratch, order);
+    size_t repeated = order;    /* the first point that lies on an earlier one */
     for (size_t i = 1; i < order; i++) {
         const double *p = points_iq + 2 * (size_t)scratch[i - 1],
                      *q = points_iq + 2 * (size_t)scratch[i];
-        if (p[0] == q[0] && p[1] == q[1])
-            return fail(where, scratch[i], PDM_BAD_POINT);
+        if (p[0] == q[0] && p[1] == q[1] && scratch[i] < repeated)
+            repeated = scratch[i];
     }
+    if (repeated < order)
+        return fail(where, repeated, PDM_BAD_POINT);
     plan->unit = 1;
     while (peak * plan->unit >= 1)
         plan->unit /= 2;

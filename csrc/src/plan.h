@@ -8,12 +8,18 @@
 
 #include "pydemap.h"
 
+/* Limits.  Smaller ones, the same for all files of a build, save stack in
+ * firmware; a constellation beyond them is taken as points. */
+#ifndef PDM_MAX_LEVELS
+#define PDM_MAX_LEVELS 256  /* coordinates of an axis; a power of two */
+#endif
+#ifndef PDM_MAX_SLOTS
+#define PDM_MAX_SLOTS 640   /* of all axes of all boxes */
+#endif
 enum {
     PDM_MAX_BITS = 16,
-    PDM_MAX_LEVELS = 256,   /* coordinates of an axis */
     PDM_MAX_PATTERNS = 8,   /* independent bits of an axis: 2^8 slots */
-    PDM_MAX_BOXES = 4,
-    PDM_MAX_SLOTS = 640     /* of all axes of all boxes */
+    PDM_MAX_BOXES = 4
 };
 
 /* Where a label bit is read in a box. */

@@ -14,8 +14,6 @@
  * of which the first is a whole number of 2^-COARSE: products of first parts
  * are then exact, and so is their sum. */
 
-enum { F(CHUNK_BITS) = 6 };
-
 /* A number in two parts. */
 struct F(pair) {
     double high, low;
@@ -56,7 +54,7 @@ struct F(cloud) {
     double e_high[2][LANES], e_low[2][LANES];   /* from there to the sample */
     double scale[LANES], per_nat;               /* units of metrics, as in boxes.h */
     int low_bits, chunks;
-    real low_cost[1 << F(CHUNK_BITS)][LANES];   /* priors of the low bits, by slot */
+    real low_cost[1 << CHUNK_BITS][LANES];   /* priors of the low bits, by slot */
 };
 
 /* The nearest point of each lane, found relative to the point of label 0. */
@@ -106,7 +104,7 @@ static void F(prepare_cloud)(const struct pdm_plan *plan, const struct F(block) 
             c->e_high[axis][i] = v.high - s.high;
             c->e_low[axis][i] = v.low - s.low;
         }
-    c->low_bits = plan->bits < F(CHUNK_BITS) ? plan->bits : F(CHUNK_BITS);
+    c->low_bits = plan->bits < CHUNK_BITS ? plan->bits : CHUNK_BITS;
     c->chunks = 1 << (plan->bits - c->low_bits);
 }
 
@@ -131,7 +129,7 @@ static inline int F(chunk_bit)(const struct F(cloud) *c, int chunk, int k)
 }
 
 /* Metrics of the labels of a chunk, priors added. */
-static void F(chunk_metrics)(const struct F(cloud) *c, int chunk, real slot[PDM_MAX_LEVELS][LANES])
+static void F(chunk_metrics)(const struct F(cloud) *c, int chunk, real slot[1 << CHUNK_BITS][LANES])
 {
     const int count = 1 << c->low_bits;
     const double *x = pdm_points(c->plan) + (size_t)chunk * (size_t)count, *y = x + c->plan->order;
@@ -163,7 +161,7 @@ static void F(chunk_metrics)(const struct F(cloud) *c, int chunk, real slot[PDM_
 /* The least metric of each bit value. */
 static void F(points_least)(const struct F(cloud) *c, real best[PDM_MAX_BITS][2][LANES])
 {
-    real slot[PDM_MAX_LEVELS][LANES], half[PDM_MAX_PATTERNS][2][LANES];
+    real slot[1 << CHUNK_BITS][LANES], half[PDM_MAX_PATTERNS][2][LANES];
     const int high = c->plan->bits - c->low_bits;
     for (int k = 0; k < c->plan->bits; k++)
         EACH_LANE best[k][0][i] = best[k][1][i] = LARGEST;
@@ -179,7 +177,7 @@ static void F(points_least)(const struct F(cloud) *c, real best[PDM_MAX_BITS][2]
     }
 }
 
-static void F(points_max_log)(const struct pdm_plan *plan, struct F(block) *b)
+APART void F(points_max_log)(const struct pdm_plan *plan, struct F(block) *b)
 {
     struct F(cloud) c;
     real best[PDM_MAX_BITS][2][LANES];
@@ -193,11 +191,11 @@ static void F(points_max_log)(const struct pdm_plan *plan, struct F(block) *b)
 /* The sums of all bits in question relative to the nearest point with that bit
  * value, for blocks in which a sum relative to the nearest point of all has
  * lost terms to underflow. */
-static void F(points_far)(struct F(cloud) *c, const uint8_t far[PDM_MAX_BITS],
+APART void F(points_far)(struct F(cloud) *c, const uint8_t far[PDM_MAX_BITS],
                           struct F(block) *b)
 {
     const int n = c->plan->bits, count = 1 << c->low_bits;
-    real slot[PDM_MAX_LEVELS][LANES], best[PDM_MAX_BITS][2][LANES], sum[PDM_MAX_BITS][2][LANES];
+    real slot[1 << CHUNK_BITS][LANES], best[PDM_MAX_BITS][2][LANES], sum[PDM_MAX_BITS][2][LANES];
     F(set_units)(1, c);
     F(points_least)(c, best);
     for (int k = 0; k < n; k++)
@@ -228,10 +226,10 @@ static void F(points_far)(struct F(cloud) *c, const uint8_t far[PDM_MAX_BITS],
             }
 }
 
-static void F(points_exact)(const struct pdm_plan *plan, struct F(block) *b)
+APART void F(points_exact)(const struct pdm_plan *plan, struct F(block) *b)
 {
     struct F(cloud) c;
-    real slot[PDM_MAX_LEVELS][LANES], half[PDM_MAX_PATTERNS][2][LANES], least[LANES];
+    real slot[1 << CHUNK_BITS][LANES], half[PDM_MAX_PATTERNS][2][LANES], least[LANES];
     real difference[PDM_MAX_PATTERNS][LANES];
     real sum[PDM_MAX_BITS][3][LANES], lost[PDM_MAX_BITS][3][LANES], best[PDM_MAX_BITS][2][LANES];
     uint8_t far[PDM_MAX_BITS];

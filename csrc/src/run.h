@@ -42,6 +42,7 @@ static void F(run)(const struct pdm_call *call)
     const struct pdm_plan *plan = call->plan;
     const int rule = call->settings.rule, n = plan->bits;
     struct F(fold_table) table;
+    struct F(block) b;
     const int folds = plan->family == PDM_FOLD && call->output != PDM_OUT_LABEL &&
                       (rule == PDM_LINEAR || (rule == PDM_MAX_LOG && !call->prior));
     if (folds)
@@ -49,7 +50,6 @@ static void F(run)(const struct pdm_call *call)
     for (size_t first = 0; first < call->count; first += LANES) {
         const int count = call->count - first < LANES ? (int)(call->count - first) : LANES;
         const size_t start = first * (size_t)n;
-        struct F(block) b;
         real buffer[PDM_MAX_BITS * LANES], *llr = buffer;
         if (call->output == PDM_OUT_REAL && count == LANES)
             llr = (real *)call->out + start;    /* no need for a copy */
@@ -59,6 +59,8 @@ static void F(run)(const struct pdm_call *call)
             continue;
         }
         if (folds) {
+            if (first == 0 && b.same_noise)
+                F(slopes)(n, plan, &b, &table, table.slope);
             WITH_BITS(n, F(fold), plan, &table, &b, llr)
             if (b.lifted || b.has_prior)
                 F(fold_rarities)(plan, &b, &call->settings, llr);
