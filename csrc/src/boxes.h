@@ -268,11 +268,21 @@ static inline void F(box_cost)(const struct pdm_plan *plan, int x, const struct 
         }
 }
 
-/* side[0] = all of side[], combined in pairs. */
-#define REDUCE(side, count, combine)                                                            \
-    for (int step = (count) / 2; step > 0; step /= 2)                                           \
-        for (int s = 0; s < step; s++)                                                          \
-            EACH_LANE side[s][i] = combine(side[s][i], side[s + step][i]);
+/* result = all of count terms (a power of two), combined in pairs; term(s)
+ * is the array of the s-th. */
+#define REDUCE(result, count, term, combine)                                                    \
+    do {                                                                                        \
+        const int first_step = (count) / 2;                                                     \
+        if (first_step == 0)                                                                    \
+            EACH_LANE result[i] = term(0);                                                      \
+        for (int s = 0; s < first_step; s++)                                                    \
+            EACH_LANE side[s][i] = combine(term(s), term(s + first_step));                      \
+        for (int step = first_step / 2; step > 0; step /= 2)                                    \
+            for (int s = 0; s < step; s++)                                                      \
+                EACH_LANE side[s][i] = combine(side[s][i], side[s + step][i]);                  \
+        if (first_step > 0)                                                                     \
+            EACH_LANE result[i] = side[0][i];                                                   \
+    } while (0)
 #define PLUS(a, b) ((a) + (b))
 
 /* Halve the slots until one is left: half[p][value] becomes the sum (the
@@ -285,18 +295,18 @@ static inline void F(box_cost)(const struct pdm_plan *plan, int x, const struct 
         real side[MAX_HALF][LANES];                                                             \
         for (int p = 0; p < patterns; p++) {                                                    \
             const int rest = 1 << (patterns - 1 - p);                                           \
-            for (int value = 0; value < 2; value++) {                                           \
-                for (int s = 0; s < rest; s++)                                                  \
-                    EACH_LANE side[s][i] = slot[value * rest + s][i];                           \
-                REDUCE(side, rest, combine)                                                     \
-                EACH_LANE half[p][value][i] = side[0][i];                                       \
-            }                                                                                   \
+            REDUCE(half[p][0], rest, ZERO_SIDE, combine);                                       \
+            REDUCE(half[p][1], rest, ONE_SIDE, combine);                                        \
             for (int s = 0; s < rest; s++)                                                      \
                 EACH_LANE slot[s][i] = combine(slot[s][i], slot[rest + s][i]);                  \
         }                                                                                       \
     }
+#define ZERO_SIDE(s) slot[s][i]
+#define ONE_SIDE(s) slot[rest + (s)][i]
 DEFINE_HALVE(halve_sum, PLUS)
 DEFINE_HALVE(halve_least, F(least))
+#undef ZERO_SIDE
+#undef ONE_SIDE
 
 /* difference[p]: the sum of the slots whose pattern p is 0 less that of the
  * others, added up from the differences of slots that differ in this pattern
@@ -307,13 +317,12 @@ static inline void F(differences)(int patterns, real slot[][LANES],
 {
     real side[MAX_HALF][LANES];
     for (int p = 0; p < patterns; p++) {
-        const int way = 1 << (patterns - 1 - p), pairs = 1 << (patterns - 1);
-        for (int s = 0; s < pairs; s++) {
-            const int zero = (s & ~(way - 1)) << 1 | (s & (way - 1));
-            EACH_LANE side[s][i] = slot[zero][i] - slot[zero + way][i];
-        }
-        REDUCE(side, pairs, PLUS)
-        EACH_LANE difference[p][i] = side[0][i];
+        const int way = 1 << (patterns - 1 - p);
+#define ZERO_OF(s) (((s) & ~(way - 1)) << 1 | ((s) & (way - 1)))
+#define PAIR(s) (slot[ZERO_OF(s)][i] - slot[ZERO_OF(s) + way][i])
+        REDUCE(difference[p], 1 << (patterns - 1), PAIR, PLUS);
+#undef PAIR
+#undef ZERO_OF
     }
 }
 #undef PLUS
