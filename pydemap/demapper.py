@@ -413,8 +413,9 @@ class SoftDemapper:
             raise ValueError(f"out must have shape {shape}, got {out.shape}")
         if not out.flags.carray:
             raise ValueError("out must be C-contiguous, aligned and writeable")
-        for name, array in inputs.items():
-            if not isinstance(array, np.ndarray) or not np.may_share_memory(out, array):
+        for name, given in inputs.items():
+            array = np.asarray(given)
+            if not np.may_share_memory(out, array):
                 continue
             same = array.shape == out.shape and array.dtype == out.dtype and array.strides == out.strides
             if not (name == "prior" and same and array.ctypes.data == out.ctypes.data):
@@ -472,9 +473,11 @@ def _hold(converted: npt.NDArray[Any], given: npt.NDArray[Any]) -> npt.NDArray[A
 def _as_complex(array: npt.NDArray[Any], real: np.dtype[Any]) -> npt.NDArray[Any]:
     """C-contiguous complex array whose parts are of type `real`."""
     wanted = np.dtype(np.complex128 if real == np.float64 else np.complex64)
+    if array.dtype == wanted:
+        return _ready(array, wanted)
     with np.errstate(over="ignore"):
         result = _ready(array, wanted)
-    if array.dtype != wanted and not np.isfinite(result).all():
+    if not np.isfinite(result).all():
         parts = np.ascontiguousarray(array, np.complex128).view(np.float64)
         result = _hold(np.ascontiguousarray(result).view(real), parts).view(wanted).reshape(array.shape)
     return result
@@ -482,10 +485,10 @@ def _as_complex(array: npt.NDArray[Any], real: np.dtype[Any]) -> npt.NDArray[Any
 
 def _as_positive_real(array: npt.NDArray[Any], real: np.dtype[Any]) -> npt.NDArray[Any]:
     """C-contiguous array of type `real`; positive numbers stay finite and > 0."""
+    if array.dtype == real:
+        return _ready(array, real)
     with np.errstate(over="ignore", under="ignore"):
         result = _ready(array, real)
-    if array.dtype == real:
-        return result
     vanished = (result == 0) & (array > 0)
     if vanished.any():
         result = np.where(vanished, np.finfo(real).smallest_subnormal, result)

@@ -115,7 +115,8 @@ def _linear(
     y: NDArray[np.complex128], h: NDArray[np.complex128], n0: NDArray[np.float64], c: Constellation
 ) -> NDArray[np.float64]:
     u = y / np.where(h == 0, 1, h)
-    axes = [(*_levels(c.points.real), u.real), (*_levels(c.points.imag), u.imag)]
+    peak = float(np.abs(c.points).max())
+    axes = [(*_levels(c.points.real, peak), u.real), (*_levels(c.points.imag, peak), u.imag)]
     if axes[0][0].size * axes[1][0].size != c.order:
         raise ValueError(f"rule 'linear' needs a full rectangular grid, got {c!r}")
     result = []
@@ -135,9 +136,11 @@ def _linear(
     return np.stack(result, axis=-1)
 
 
-def _levels(coordinate: NDArray[np.float64]) -> tuple[NDArray[np.float64], NDArray[np.intp]]:
+def _levels(
+    coordinate: NDArray[np.float64], peak: float
+) -> tuple[NDArray[np.float64], NDArray[np.intp]]:
     """The different levels of an axis, ascending, and the place of each point among them."""
-    unit = 1e-9 * np.abs(coordinate).max() or 1.0
+    unit = 1e-9 * peak  # of both axes: on one axis all coordinates may be rounding errors of 0
     _, first, place = np.unique(np.round(coordinate / unit), return_index=True, return_inverse=True)
     levels = coordinate[first]
     if levels.size > 2 and not np.allclose(np.diff(levels), levels[1] - levels[0], rtol=1e-6, atol=0):

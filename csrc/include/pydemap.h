@@ -45,9 +45,10 @@ typedef struct pdm_plan pdm_plan;
 
 enum pdm_status {
     PDM_OK = 0,
-    PDM_BAD_ARGUMENT = 1,   /* a pointer is NULL, or a count fits nothing */
+    PDM_BAD_ARGUMENT = 1,   /* a pointer is NULL or misaligned, or a count fits nothing */
     PDM_BAD_ORDER = 2,      /* not a power of two from 2 to 65536 */
-    PDM_BAD_POINT = 3,      /* a point is not finite, or lies on another */
+    PDM_BAD_POINT = 3,      /* a point is not finite, lies on another, or the
+                               largest is not within 2^-100 .. 2^100 */
     PDM_BAD_LABEL = 4,      /* labels are not 0 .. M-1, each once */
     PDM_BAD_SPACE = 5,      /* the memory given for a plan is too small */
     PDM_BAD_PLAN = 6,       /* the memory holds no finished plan */
@@ -78,7 +79,7 @@ typedef struct pdm_settings {
     int positive_bit;       /* the bit value that a positive LLR (and a
                                positive prior) stands for: 0 or 1 */
     int word_bits;          /* words only: 2 .. 8 for int8, 2 .. 16 for int16 */
-    double word_step;       /* words only: LLR per count, finite and > 0 */
+    double word_step;       /* words only: LLR per count, 2^-126 .. 2^127 */
 } pdm_settings;
 
 /* pdm_status_text
@@ -143,9 +144,9 @@ int pdm_plan_boxes(const pdm_plan *plan);      /* number of boxes; 0: points */
  *              gives NaN for all its bits; a word of 0 (an erasure).  h = 0
  *              carries no information: the LLR is the prior, or 0.  Finite input
  *              never gives NaN.  Results beyond the type's range become its
- *              largest finite value of that sign; y / h and |h|^2 / N0 near it or
- *              beyond count as a quarter of its largest value; a prior beyond 2^99 (f64: 2^900), infinite
- *              ones included, counts as that.
+ *              largest finite value of that sign.  y / h beyond 2^107 (f64:
+ *              2^1003) times the constellation's scale counts as that, a prior
+ *              beyond 2^99 (2^900), infinite ones included, likewise.
  * Words        the float32 LLR divided by (float)word_step, rounded half to
  *              even, saturated at +-(2^(word_bits-1) - 1).
  * Returns      PDM_OK, PDM_BAD_ARGUMENT, _PLAN, _RULE, _NOISE or _WORD.

@@ -8,7 +8,7 @@ struct F(block) {
                                    no information */
     real lift[LANES];           /* what LLRs have to grow by where it was below LEAST_NOISE */
     real poison[LANES];         /* 0, or NaN where y, h or a prior is not usable */
-    real prior[PDM_MAX_BITS][LANES];    /* positive means 0; set where has_prior */
+    real prior[PDM_MAX_BITS][LANES];    /* positive means 0, over lift; set where has_prior */
     real llr[PDM_MAX_BITS][LANES];      /* positive means 0 */
     uint32_t label[LANES];      /* slicing: the nearest point */
     int has_prior;
@@ -32,6 +32,12 @@ static inline void F(scale)(const struct F(block) *b, double x, real scale[LANES
     } else {
         EACH_LANE scale[i] = (real)(x / b->noise[i]);
     }
+}
+
+/* 0 for 0; for anything else the one NaN of which every machine keeps all bits. */
+static inline real F(poison)(real x)
+{
+    return x == 0 ? 0 : F(from_word)((word)(2 * EXPONENT_ONE + 1) << FRACTION_BITS | (word)1 << (FRACTION_BITS - 1));
 }
 
 /* So small a noise variance would make metrics overflow and their differences
@@ -62,7 +68,7 @@ static inline void F(equalise)(struct F(block) *b, int i, const real *y, const r
     const double power = hr * hr + hi * hi;
     const int silent = !(power > 0);    /* h = 0, or NaN */
     const double back = 8 * down * unit, divisor = silent ? 1 : power;
-    const real poison = (real)((yr - yr) + (yi - yi) + (hr - hr) + (hi - hi));
+    const real poison = F(poison)((real)((yr - yr) + (yi - yi) + (hr - hr) + (hi - hi)));
     const int usable = !silent && poison == 0;
     b->v[0][i] = usable ? F(hold)((yr * hr + yi * hi) / divisor * back) : 0;
     b->v[1][i] = usable ? F(hold)((yi * hr - yr * hi) / divisor * back) : 0;
@@ -97,7 +103,8 @@ static void F(load)(const struct pdm_call *call, size_t first, int count, struct
         const real u = (real)unit, most = (real)FARTHEST;
         EACH_LANE
         {
-            const real yr = y[2 * i], yi = y[2 * i + 1], poison = (yr - yr) + (yi - yi);
+            const real yr = y[2 * i], yi = y[2 * i + 1];
+            const real poison = F(poison)((yr - yr) + (yi - yi));
             const real vr = F(most)(F(least)(yr * u, most), -most);
             const real vi = F(most)(F(least)(yi * u, most), -most);
             b->v[0][i] = poison == 0 ? vr : 0;
@@ -122,8 +129,9 @@ static void F(load)(const struct pdm_call *call, size_t first, int count, struct
         EACH_LANE
         {
             const real p = i < count ? prior[i * n + k] * sign : 0;
-            b->poison[i] = p == p ? b->poison[i] : p;
-            b->prior[k][i] = p == p ? F(most)(-PRIOR_LIMIT, F(least)(p, PRIOR_LIMIT)) : 0;
+            b->poison[i] = p == p ? b->poison[i] : F(poison)(p);
+            b->prior[k][i] =
+                p == p ? F(most)(-PRIOR_LIMIT, F(least)(p, PRIOR_LIMIT)) / b->lift[i] : 0;
         }
 }
 
@@ -133,13 +141,20 @@ BY_CONSTANT void F(finish)(const int n, const pdm_settings *settings, struct F(b
     for (int k = 0; k < n; k++) {
         real *l = b->llr[k];
         const real *prior = b->prior[k];
-        if (b->lifted)  /* all but the ln 2 of a tie */
-            EACH_LANE l[i] = F(magnitude)(l[i]) > R(1e6) ? l[i] * b->lift[i] : l[i];
         if (b->has_prior) {
             EACH_LANE l[i] = b->noise[i] < NO_INFORMATION ? l[i] : prior[i];
             if (settings->extrinsic)
                 EACH_LANE l[i] -= prior[i];
         }
+        /* What N0 makes grows; ln 2 of a tie and what the prior makes do not.
+         * A difference of metrics is either 0 or beyond 1e6 down there. */
+        if (b->lifted)
+            EACH_LANE
+            {
+                const real known = b->has_prior && !settings->extrinsic ? prior[i] : 0;
+                l[i] = F(magnitude)(l[i]) > R(1e6) ? l[i] * b->lift[i]
+                                                   : l[i] - known + known * b->lift[i];
+            }
         const real sign = settings->positive_bit ? -R(1.) : R(1.);
         EACH_LANE l[i] = sign * F(most)(F(least)(l[i], LARGEST), -LARGEST) + b->poison[i];
     }

@@ -9,7 +9,7 @@
  * slot, and adds in pairs, which keeps rounding errors small.  Max-log is the
  * same with (minimum, +) for (+, x).
  *
- * Metrics are -ln of the weights, relative to the box's level nearest to the
+ * Metrics are -ln (or -log2) of the weights, relative to the box's level nearest to the
  * sample on that axis: a level i spacings from it, which the sample misses by
  * e half-spacings, costs (2 a)^2 / N0 i (i + e).  The difference of two squared
  * distances would lose its digits; so would metrics relative to one level for
@@ -129,7 +129,8 @@ static void F(view_boxes)(const struct pdm_plan *plan, const struct F(block) *b,
                           struct F(scene) *scene)
 {
     scene->per_nat = per_nat;
-    if (plan->boxes == 1) {
+    if (plan->boxes == 1 && plan->box[0].axis[0].count == plan->levels[0] &&
+        plan->box[0].axis[1].count == plan->levels[1]) {     /* no lines left out */
         for (int axis = 0; axis < 2; axis++) {
             F(place)(plan, axis, b, 1, scene->view[0][axis].number);
             F(set_view)(plan, axis, b, per_nat, &scene->view[0][axis]);
@@ -420,7 +421,7 @@ APART void F(boxes_exact)(const struct pdm_plan *plan, struct F(block) *b)
     F(view_boxes)(plan, b, LOG2_E, &scene);
 
     /* The least metric of each axis of each box, and of all points: 0 but for
-     * the prior. */
+     * the prior (and for roundings of the nearest level, which split_exp2 takes). */
     EACH_LANE least[i] = LARGEST;
     for (int x = 0; x < plan->boxes; x++) {
         for (int axis = 0; axis < 2; axis++) {

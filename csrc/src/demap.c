@@ -80,7 +80,7 @@ const char *pdm_status_text(int status)
     case PDM_BAD_PLAN: return "the memory holds no finished plan";
     case PDM_BAD_RULE: return "the rule is unknown, or linear for a constellation that is no Gray grid";
     case PDM_BAD_NOISE: return "a noise variance is not finite and > 0";
-    case PDM_BAD_WORD: return "a word has too few or too many bits, or a step that is not finite and > 0";
+    case PDM_BAD_WORD: return "a word has too few or too many bits, or a step that is not within 2^-126 .. 2^127";
     case PDM_BAD_ISA: return "no such instruction-set level on this machine";
     }
     return "unknown status";
@@ -186,20 +186,20 @@ int pdm_demap_f32(const pdm_plan *plan, const pdm_settings *settings, size_t n_s
 int pdm_demap_i8(const pdm_plan *plan, const pdm_settings *settings, size_t n_symbols,
                  const float *y_iq, const float *noise_variance, size_t noise_count,
                  const float *gain_iq, size_t gain_count, const float *prior,
-                 int8_t *words, size_t *where)
+                 int8_t *word, size_t *where)
 {
     struct pdm_call call;
-    request(&call, plan, n_symbols, y_iq, noise_variance, gain_iq, prior, words, PDM_OUT_I8);
+    request(&call, plan, n_symbols, y_iq, noise_variance, gain_iq, prior, word, PDM_OUT_I8);
     return run_f32(&call, settings, noise_count, gain_count, 8, where);
 }
 
 int pdm_demap_i16(const pdm_plan *plan, const pdm_settings *settings, size_t n_symbols,
                   const float *y_iq, const float *noise_variance, size_t noise_count,
                   const float *gain_iq, size_t gain_count, const float *prior,
-                  int16_t *words, size_t *where)
+                  int16_t *word, size_t *where)
 {
     struct pdm_call call;
-    request(&call, plan, n_symbols, y_iq, noise_variance, gain_iq, prior, words, PDM_OUT_I16);
+    request(&call, plan, n_symbols, y_iq, noise_variance, gain_iq, prior, word, PDM_OUT_I16);
     return run_f32(&call, settings, noise_count, gain_count, 16, where);
 }
 

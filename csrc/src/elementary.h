@@ -1,7 +1,8 @@
 /* Template (see real.h).  exp and log of the core's own: IEEE-754 basic
  * operations only, no table, no branch, so that a loop over lanes vectorises
  * and every machine gives the same bits.  Constants and the errors they leave
- * come from constants.py; the bounds in the comments are held by tests. */
+ * come from ../constants.py; what all roundings come to is measured as a whole,
+ * on the LLRs, by the accuracy tests. */
 
 union F(bits) { real r; word w; };
 
@@ -26,7 +27,7 @@ static inline real F(least)(real a, real b) { return a < b ? a : b; }
 
 static inline real F(most)(real a, real b) { return a > b ? a : b; }
 
-/* 2^-n for a whole number n >= 0, and 0 where it would be subnormal. */
+/* 2^-n for a whole number n >= -ZERO_WEIGHT, and 0 where it would be subnormal. */
 static inline real F(half_to_the)(real n)
 {
     const real held = F(least)(n, (real)ZERO_WEIGHT);
@@ -34,9 +35,12 @@ static inline real F(half_to_the)(real n)
     return held < (real)ZERO_WEIGHT ? F(from_word)(scale << FRACTION_BITS) : 0;
 }
 
-/* 2^-(x + low) = power 2^-n, for x >= -1 and low a rounding error of x: n is
- * the nearest whole number (x itself where it has no fraction digits any more),
- * power in [0.7, 1.42], relative error below 1.3 u, a polynomial. */
+/* 2^-(x + low) = power 2^-n, low being what roundings took off x, which is small
+ * against x but not against 1: n is the whole number nearest to their sum (the
+ * sum itself where it has no fraction digits any more), power in
+ * [0.7, 1.42], relative error below 1.3 u, a polynomial.  x < 0 comes from
+ * rounding which of two levels is the nearest; it is held where half_to_the()
+ * can take it, beyond what happens at 80 dB. */
 static inline real F(split_exp2)(real x, real low, real *n)
 {
 #if REAL_BITS == 32
@@ -50,20 +54,21 @@ static inline real F(split_exp2)(real x, real low, real *n)
                c9 = 7.07258594926922339e-9, c10 = 4.45496059818651856e-10;
 #endif
     const real whole = (real)((word)1 << (FRACTION_BITS - 1));
-    const real held = x < whole ? x : 0;
+    const real sum = x + low, rest = low - (sum - x);
+    const real held = sum < whole ? F(most)(sum, -(real)ZERO_WEIGHT / 2) : 0;
     const real nearest = (held + MAGIC) - MAGIC;
-    const real f = (nearest - held) - (x < whole ? low : 0);
+    const real f = (nearest - held) - (sum < whole ? rest : 0);
 #if REAL_BITS == 32
     const real p = c0 + f * (c1 + f * (c2 + f * (c3 + f * (c4 + f * c5))));
 #else
     const real high = c6 + f * (c7 + f * (c8 + f * (c9 + f * c10)));
     const real p = c0 + f * (c1 + f * (c2 + f * (c3 + f * (c4 + f * (c5 + f * high)))));
 #endif
-    *n = x < whole ? nearest : x;
+    *n = sum < whole ? nearest : sum;
     return 1 + f * p;
 }
 
-/* exp(-t), t >= -1: the product rounds, which costs t u more. */
+/* exp(-t), t >= 0: the product rounds, which costs t u more. */
 static inline real F(exp_minus)(real t)
 {
     real n;

@@ -1,6 +1,6 @@
 /* Template (see real.h).  Fold kernels: a Gray grid, max-log and linear.
  *
- * Folding the coordinate, v_0 = u and v_{d+1} = |v_d| - 2^(p-1-d) a for 2^p
+ * Folding the coordinate u from the grid's centre, v_0 = u and v_{d+1} = |v_d| - 2^(p-1-d) a for 2^p
  * levels of half-spacing a, makes |v_d| the distance x to the nearest
  * threshold of the bit at depth d.  With r whole spacings between threshold
  * and sample, at most the R levels that the grid has there,
@@ -162,7 +162,7 @@ APART void F(fold_rarities)(const struct pdm_plan *plan, const struct F(block) *
         for (int k = 0; k < n; k++) {
             real l = llr[i * n + k] * b->lift[i];
             if (b->has_prior && !settings->extrinsic)
-                l += settings->positive_bit ? -b->prior[k][i] : b->prior[k][i];
+                l += (settings->positive_bit ? -b->prior[k][i] : b->prior[k][i]) * b->lift[i];
             llr[i * n + k] = l > LARGEST ? LARGEST : l < -LARGEST ? -LARGEST : l;
         }
 }

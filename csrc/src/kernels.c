@@ -62,14 +62,6 @@ static inline double power_of_two(int exponent)
     return b.r;
 }
 
-/* a b less its rounded value (Dekker 1971), where nothing overflows. */
-static inline double product_low(double a, double b)
-{
-    const double ca = 0x1.0000002p+27 * a, ah = ca - (ca - a), al = a - ah;
-    const double cb = 0x1.0000002p+27 * b, bh = cb - (cb - b), bl = b - bh;
-    return ((ah * bh - a * b) + ah * bl + al * bh) + al * bl;
-}
-
 #define REAL_BITS 32
 #include "real.h"
 #undef REAL_BITS

@@ -82,6 +82,8 @@ static int find_axis(struct pdm_plan *plan, size_t axis, const double *iq,
     plan->levels[axis] = 1;
     if (step <= near)
         return 1;
+    if (step < 256 * near)      /* the tolerance could bend these levels */
+        return 0;
     const double steps = (high - low) / step;
     if (!(steps < PDM_MAX_LEVELS - 0.5))
         return 0;
@@ -101,15 +103,6 @@ static size_t level_number(const struct pdm_plan *plan, size_t axis, double x)
 {
     const double i = (x - plan->centre[axis]) / plan->half_spacing[axis] / 2;
     return (size_t)(i + (plan->levels[axis] - 1) / 2.0 + 0.5);
-}
-
-/* a b less its rounded value: the digits that a double does not hold (Dekker
- * 1971, who splits each factor into halves whose products are exact). */
-static double product_low(double a, double b)
-{
-    const double ca = 0x1.0000002p+27 * a, ah = ca - (ca - a), al = a - ah;
-    const double cb = 0x1.0000002p+27 * b, bh = cb - (cb - b), bl = b - bh;
-    return ((ah * bh - a * b) + ah * bl + al * bh) + al * bl;
 }
 
 /* Points of unit mean energy, given to the last digit or so, are taken as the
@@ -362,7 +355,7 @@ static int find_fold(struct pdm_plan *plan)
     for (int axis = 0; axis < 2; axis++) {
         const unsigned count = box->axis[axis].count, p = box->axis[axis].patterns;
         const struct pdm_level *level = pdm_levels(plan, box, axis);
-        if (count != 1u << p)
+        if (count != 1u << p || count != plan->levels[axis])
             return 0;
         plan->fold[axis].depths = 0;
         for (unsigned depth = 0; depth < p; depth++)

@@ -2,7 +2,7 @@
  *
  * Coordinates are kept in units in which the largest is in [1/2, 1): the unit
  * is a power of two, so that changing to it rounds nothing, and no product of
- * two coordinates can overflow. */
+ * two of the points' coordinates can overflow. */
 #ifndef PDM_PLAN_H
 #define PDM_PLAN_H
 
@@ -77,6 +77,16 @@ static inline const struct pdm_level *pdm_levels(const struct pdm_plan *plan,
 static inline const double *pdm_points(const struct pdm_plan *plan)
 {
     return (const double *)(plan + 1);
+}
+
+/* a b less its rounded value: the digits that a double does not hold.  Each
+ * factor is split into halves whose products are exact (Dekker, Numerische
+ * Mathematik 18, 1971); nothing must overflow. */
+static inline double product_low(double a, double b)
+{
+    const double ca = 0x1.0000002p+27 * a, ah = ca - (ca - a), al = a - ah;
+    const double cb = 0x1.0000002p+27 * b, bh = cb - (cb - b), bl = b - bh;
+    return ((ah * bh - a * b) + ah * bl + al * bh) + al * bl;
 }
 
 #endif

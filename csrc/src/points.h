@@ -11,7 +11,7 @@
  * Where several points are equally near (the middle of a ring) the two parts of
  * the product w.(e + w) cancel, and at high Es/N0 what is left of a double would
  * not do for a float64 result.  There every coordinate is taken in two parts,
- * of which the first is a whole number of 2^-COARSE: products of first parts
+ * of which the first is a whole number of 2^-23: products of first parts
  * are then exact, and so is their sum. */
 
 /* A number in two parts. */

@@ -28,6 +28,8 @@
 
 static void F(slice)(const struct pdm_call *call, size_t first, int count, struct F(block) *b)
 {
+    /* the nearest point does not depend on N0, which may be extreme */
+    EACH_LANE b->noise[i] = b->noise[i] < NO_INFORMATION ? 1 : NO_INFORMATION;
     if (call->plan->family == PDM_POINTS)
         F(points_nearest)(call->plan, b, b->label);
     else
