@@ -136,9 +136,7 @@ def _linear(
     return np.stack(result, axis=-1)
 
 
-def _levels(
-    coordinate: NDArray[np.float64], peak: float
-) -> tuple[NDArray[np.float64], NDArray[np.intp]]:
+def _levels(coordinate: NDArray[np.float64], peak: float) -> tuple[NDArray[np.float64], NDArray[np.intp]]:
     """The different levels of an axis, ascending, and the place of each point among them."""
     unit = 1e-9 * peak  # of both axes: on one axis all coordinates may be rounding errors of 0
     _, first, place = np.unique(np.round(coordinate / unit), return_index=True, return_inverse=True)
