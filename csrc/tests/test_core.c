@@ -18,7 +18,7 @@
 
 /* FNV-1a over all outputs of output_hash(): the same at every level, with
  * every compiler, on every machine. */
-static const uint64_t wanted_hash = UINT64_C(0x96e976b35a2cae1c);
+static const uint64_t wanted_hash = UINT64_C(0xa8f492087ff5c49f);
 
 /* The tests in full up to this order, beyond it recognition and hash alone: an
  * emulator may want less. */
